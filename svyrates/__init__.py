@@ -1,0 +1,76 @@
+"""Compare a proportion between groups of survey respondents, with the design taken into account.
+
+Names are fetched from their modules when first used, so that importing the package, and above all
+its command line, stays light.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from svyrates.compare import EVERYONE, EVERYONE_ELSE, ComparisonTable, compare_rates
+    from svyrates.demo import demo_survey
+    from svyrates.design import DesignSummary, SampleDesign
+    from svyrates.errors import (
+        ComparisonError,
+        DataFileError,
+        DesignError,
+        DesignWarning,
+        QuestionError,
+        RatesError,
+        RatesWarning,
+        SimpleFormulaWarning,
+    )
+    from svyrates.rates import RateTable, estimate_rates
+
+__version__ = "0.1.0"
+
+__all__ = [
+    "EVERYONE",
+    "EVERYONE_ELSE",
+    "ComparisonError",
+    "ComparisonTable",
+    "DataFileError",
+    "DesignError",
+    "DesignSummary",
+    "DesignWarning",
+    "QuestionError",
+    "RateTable",
+    "RatesError",
+    "RatesWarning",
+    "SampleDesign",
+    "SimpleFormulaWarning",
+    "compare_rates",
+    "demo_survey",
+    "estimate_rates",
+]
+
+_HOMES = {
+    "svyrates.compare": ("EVERYONE", "EVERYONE_ELSE", "ComparisonTable", "compare_rates"),
+    "svyrates.demo": ("demo_survey",),
+    "svyrates.design": ("DesignSummary", "SampleDesign"),
+    "svyrates.errors": (
+        "ComparisonError",
+        "DataFileError",
+        "DesignError",
+        "DesignWarning",
+        "QuestionError",
+        "RatesError",
+        "RatesWarning",
+        "SimpleFormulaWarning",
+    ),
+    "svyrates.rates": ("RateTable", "estimate_rates"),
+}
+_HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME_OF:
+        raise AttributeError(f"module 'svyrates' has no attribute {name!r}")
+    return getattr(import_module(_HOME_OF[name]), name)
+
+
+def __dir__() -> list[str]:
+    return sorted({*__all__, "__version__"})

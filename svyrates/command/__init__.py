@@ -1,0 +1,5 @@
+"""The command line."""
+
+from svyrates.command.app import main
+
+__all__ = ["main"]

@@ -1,0 +1,111 @@
+"""What a design found in its columns, as a small table a statistician can check at a glance."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from svyrates.design.hierarchy import Hierarchy
+from svyrates.design.lone import LonePolicy
+from svyrates.words import Column, Table, count, fixed, plural
+
+__all__ = ["DesignSummary"]
+
+
+@dataclass(frozen=True, slots=True)
+class DesignSummary:
+    """The facts of a design in reading order: `facts` pairs a label with its value."""
+
+    facts: tuple[tuple[str, str], ...]
+    remarks: tuple[str, ...]
+
+    @classmethod
+    def of(
+        cls,
+        columns: Mapping[str, Any],
+        weights: NDArray[np.float64],
+        tree: Hierarchy,
+        lone: LonePolicy | None,
+        repeated: bool,
+    ) -> DesignSummary:
+        """Collect the facts of a checked design."""
+        total = float(weights.sum())
+        positive = int(np.count_nonzero(weights))
+        zero = weights.size - positive
+        per_stratum = tree.n_children[0]
+        units = int(per_stratum.sum())
+        spread = f"{per_stratum.min()} / {int(np.median(per_stratum))} / {per_stratum.max()}"
+        relative = abs(total / positive - 1.0) <= 0.01
+        facts = [
+            ("records", count(weights.size) + (f" ({count(zero)} of weight zero)" if zero else "")),
+            ("weight", columns["weight"] or "none: every record has weight 1"),
+            ("sum of weights", count(total) + (" (relative weights)" if relative else "")),
+            ("unequal-weighting factor (Kish)", fixed(_kish(weights, positive), 2)),
+            ("strata", _strata(columns["strata"], tree.n_strata)),
+            ("first-stage units", f"{count(units)} ({_unit_name(columns, tree)})"),
+            ("units per stratum: least / median / most", spread),
+            ("stages in the variance", _stages(tree)),
+            ("degrees of freedom", count(units - tree.n_strata)),
+        ]
+        remarks = []
+        if repeated:
+            remarks.append("Unit codes repeat across strata; they are read within strata.")
+        if lone is not None:
+            listed = plural(len(lone.strata), "stratum", "strata")
+            remarks.append(f"{listed} with a single sampling unit: {lone.done}.")
+        deeper = [tree.n_children[level] for level in range(1, len(tree.n_children))]
+        alone = sum(int(np.count_nonzero(children == 1)) for children in deeper)
+        if alone:
+            remarks.append(
+                f"{plural(alone, 'unit')} of a later stage drawn alone: no variance is counted "
+                "inside them."
+            )
+        if relative:
+            remarks.append("The weights sum to the sample size, so population sizes are unknown.")
+        return cls(tuple(facts), tuple(remarks))
+
+    def table(self) -> Table:
+        """The facts as a two-column table."""
+        names = Column("item", "", [name for name, _ in self.facts], key=True)
+        values = Column("value", "", [value for _, value in self.facts])
+        return Table("Sample design", (names, values), self.remarks)
+
+    def text(self, width: int = 80) -> str:
+        """Plain text, at most `width` columns wide."""
+        return self.table().text(width)
+
+    def html(self) -> str:
+        """An HTML fragment."""
+        return self.table().html()
+
+    def __str__(self) -> str:
+        return self.text()
+
+    def _repr_html_(self) -> str:
+        return self.html()
+
+
+def _kish(weights: NDArray[np.float64], positive: int) -> float:
+    total = float(weights.sum())
+    return positive * float(np.dot(weights, weights)) / total**2
+
+
+def _strata(names: tuple[str, ...], n_strata: int) -> str:
+    return f"{count(n_strata)} ({' × '.join(names)})" if names else "none: one stratum"
+
+
+def _unit_name(columns: Mapping[str, Any], tree: Hierarchy) -> str:
+    return str(columns["clusters"][0]) if tree.parent and columns["clusters"] else "the records"
+
+
+def _stages(tree: Hierarchy) -> str:
+    depth = len(tree.n_children) - (0 if bool(tree.n_children[-1].any()) else 1)
+    corrected = [bool(np.any(fraction > 0)) for fraction in tree.fraction[:depth]]
+    words = [
+        "with finite population correction" if flag else "with replacement" for flag in corrected
+    ]
+    return "; ".join(f"{stage}: {word}" for stage, word in enumerate(words, start=1))

@@ -1,0 +1,272 @@
+"""`estimate_rates`: from a design and a question to a table of rates."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from svyrates.design import SampleDesign
+from svyrates.errors import QuestionError, all_faults, some
+from svyrates.rates.limits import INTERVALS, Interval, rate_limits
+from svyrates.rates.question import (
+    Grouping,
+    Outcome,
+    read_grouping,
+    read_outcomes,
+    read_where,
+)
+from svyrates.rates.source import CrudeRates, SideRates
+from svyrates.rates.table import Coverage, RateBlock, RateTable
+from svyrates.tally import Tally, tally_records
+from svyrates.totals import UnitTotals
+
+__all__ = ["estimate_rates"]
+
+FloatArray = NDArray[np.float64]
+DF_RULES = ("domain", "design", "satterthwaite")
+
+
+def estimate_rates(
+    design: SampleDesign,
+    outcome: Any,
+    *,
+    success: Any = None,
+    by: Any = None,
+    where: Any = None,
+    interval: Interval = "korn-graubard",
+    level: float = 0.95,
+    df: str | float | None = None,
+    joint: bool = False,
+) -> RateTable:
+    """Estimate the weighted rate of an outcome in every group, with design-based variances.
+
+    Parameters
+    ----------
+    design : SampleDesign
+        The full sample.
+    outcome : str, list of str, or dict
+        A 0/1 or boolean column, or any column with `success`; a list for several outcomes; a dict
+        of name -> column, (column, success values), or mask.
+    success : value, list of values, or dict of outcome -> values, optional
+        The answers that count as success. All other known answers count as failure; missing
+        answers are left out of the rate, and counted.
+    by : str, list of str, or dict, optional
+        A grouping column, several (crossed), or a dict of name -> mask, whose groups may overlap.
+        Without it everyone is one group.
+    where : mask, optional
+        The subpopulation: a boolean array, a column name or a narwhals expression. It is a domain
+        inside the full design, never a filter; a null is outside, and counted.
+    interval : {"korn-graubard", "wilson", "logit", "wald", "arcsine", "jeffreys", "agresti-coull"}
+        Method of the confidence limits of each rate.
+    level : float
+        Confidence level in (0, 1).
+    df : {"domain", "design", "satterthwaite"} or float, optional
+        Degrees of freedom: sampling units with members minus strata with members (the default);
+        units minus strata of the whole design; Satterthwaite's from the strata's contributions;
+        or a number.
+    joint : bool
+        Tally several outcomes together, so that they can be compared with each other.
+
+    Returns
+    -------
+    RateTable
+
+    Raises
+    ------
+    QuestionError
+        Lists every fault found in the outcome, groups, subpopulation and options.
+
+    Notes
+    -----
+    `p = Σwy/Σw` over the members of a group: records of positive weight with a known outcome and
+    a known group. Its variance is that of the total of the linearized variable `w(y - p)/Σw`
+    over all sampling units, those without a member included (Wolter 2007, chapter 6).
+
+    Examples
+    --------
+    >>> import svyrates as sr
+    >>> survey = sr.demo_survey(wave="2024")
+    >>> design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
+    >>> rates = sr.estimate_rates(
+    ...     design, outcome="cold_home", success=["often", "always"], by="tenure"
+    ... )
+    >>> rates.columns
+    ('tenure',)
+
+    Each row is the estimated share of a tenure group whose home is often or always cold.
+    """
+    faults: list[str] = []
+    if not isinstance(design, SampleDesign):
+        raise QuestionError(
+            f"`design` must be a SampleDesign; got {type(design).__name__}. Build one with "
+            "SampleDesign(data, weight=..., strata=..., clusters=...)."
+        )
+    check_options(interval, level, df, faults)
+    outcomes = read_outcomes(design.frame, outcome, success, faults)
+    inside, n_where_unknown = read_where(design.frame, where, faults)
+    grouping = read_grouping(design.frame, by, faults)
+    all_faults(QuestionError, "The question has", faults)
+    pattern, coverage = _in_scope(design, grouping, inside, n_where_unknown)
+    together = [tuple(range(len(outcomes)))] if joint else [(i,) for i in range(len(outcomes))]
+    blocks, parts = [], []
+    for positions in together:
+        tally = tally_records(
+            design.tree.leaf,
+            design.tree.n_leaves,
+            design.weights,
+            pattern,
+            grouping.membership.shape[0],
+            [outcomes[position].level for position in positions],
+        )
+        units = UnitTotals(design.tree, tally, grouping.membership, design.n_records)
+        source = CrudeRates.of(units, design.df)
+        block = RateBlock(positions, source)
+        blocks.append(block)
+        parts.append(_measure(block, grouping, tally, df))
+    return _assemble(
+        design, outcomes, grouping, coverage, blocks, parts, interval, level, df or "domain"
+    )
+
+
+def check_options(interval: str, level: float, df: str | float | None, faults: list[str]) -> None:
+    """Check the options that every question shares."""
+    if interval not in INTERVALS:
+        faults.append(f"interval must be one of {some(INTERVALS, 7)}; got {interval!r}.")
+    if isinstance(level, bool) or not isinstance(level, int | float) or not 0.0 < level < 1.0:
+        faults.append(f"level must be a number between 0 and 1, such as 0.95; got {level!r}.")
+    number = isinstance(df, int | float | np.number) and not isinstance(df, bool)
+    if df is not None and df not in DF_RULES and not (number and float(df) > 0):
+        faults.append(f"df must be one of {some(DF_RULES)} or a positive number; got {df!r}.")
+
+
+def _in_scope(
+    design: SampleDesign,
+    grouping: Grouping,
+    inside: NDArray[np.bool_] | None,
+    n_where_unknown: int,
+) -> tuple[NDArray[np.int32], Coverage]:
+    pattern = grouping.pattern
+    n_zero = int(design.n_records - np.count_nonzero(design.weights))
+    unknown = pattern < 0
+    if inside is None:
+        n_unknown, n_outside = int(np.count_nonzero(unknown)), 0
+    else:
+        n_unknown = int(np.count_nonzero(unknown & inside))
+        n_outside = int(np.count_nonzero(~inside))
+        pattern = np.where(inside, pattern, np.int32(-1))
+    return pattern, Coverage(design.n_records, n_zero, n_outside, n_where_unknown, n_unknown)
+
+
+def _measure(
+    block: RateBlock, grouping: Grouping, tally: Tally, df: str | float | None
+) -> dict[str, FloatArray]:
+    """Everything about the rows of one block but their limits, outcomes slowest."""
+    source = block.source
+    n_cells = grouping.membership.shape[1]
+    cells = [
+        position * n_cells + group
+        for position in range(len(block.outcomes))
+        for group in range(grouping.n_groups)
+    ]
+    found = source.sides(source.rows_of(cells))
+    n_atoms = tally.pattern.size
+    by_atom = np.bincount(tally.atom, weights=tally.n, minlength=n_atoms)
+    of_atom = grouping.membership[tally.pattern][:, : grouping.n_groups]
+    n_missing = [of_atom.T @ (by_atom * (level == 2)) for level in tally.level.T]
+    variance, df_values = variances(found, source, df)
+    return {
+        "n": found.n,
+        "n_success": found.y,
+        "n_missing": np.concatenate(n_missing),
+        "weighted_n": found.weighted_n,
+        "rate": found.rate,
+        "se": np.sqrt(variance),
+        "df": df_values,
+        "kish_factor": found.kish_factor,
+        "unweighted_rate": found.unweighted,
+    }
+
+
+def variances(
+    found: SideRates, source: CrudeRates, df: str | float | None
+) -> tuple[FloatArray, FloatArray]:
+    """Variance of each side's rate, NaN where undefined, and its degrees of freedom."""
+    m = found.rate.size
+    variance = found.stacked.variance()[:m]
+    undefined = (found.n == 0) | found.certain | ((variance == 0.0) & (found.units < 2))
+    freedom = freedom_of(found, source, df)
+    return np.where(undefined, np.nan, variance), np.where(found.n > 0, freedom, np.nan)
+
+
+def freedom_of(found: SideRates, source: CrudeRates, df: str | float | None) -> FloatArray:
+    """Degrees of freedom of each side's rate under a rule."""
+    m = found.rate.size
+    if df is None or df == "domain":
+        return (found.units - found.strata).astype(np.float64)
+    if df == "design":
+        return np.full(m, float(source.design_df))
+    if df == "satterthwaite":
+        return found.stacked.spread.satterthwaite(np.arange(m), np.full(m, -1))
+    return np.full(m, float(df))
+
+
+def _assemble(
+    design: SampleDesign,
+    outcomes: list[Outcome],
+    grouping: Grouping,
+    coverage: Coverage,
+    blocks: list[RateBlock],
+    parts: list[dict[str, FloatArray]],
+    interval: str,
+    level: float,
+    df_rule: str | float,
+) -> RateTable:
+    joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    with np.errstate(invalid="ignore", divide="ignore"):
+        n_star = joined["rate"] * (1.0 - joined["rate"]) / joined["se"] ** 2
+    low, high = rate_limits(joined["rate"], joined["n"], n_star, joined["df"], interval, level)
+    return RateTable(
+        outcomes=tuple(outcome.name for outcome in outcomes),
+        success=tuple(outcome.defined for outcome in outcomes),
+        columns=grouping.columns,
+        groups=grouping.labels,
+        low=low,
+        high=high,
+        notes=_notes(joined, interval),
+        interval=interval,
+        level=level,
+        df_rule=df_rule,
+        coverage=coverage,
+        weights_are_relative=design.weights_are_relative,
+        overlapping=grouping.overlapping,
+        blocks=tuple(blocks),
+        **joined,
+    )
+
+
+def _notes(found: dict[str, FloatArray], interval: str) -> tuple[str, ...]:
+    """What a reader must know about each row."""
+    rate, se, n, df = found["rate"], found["se"], found["n"], found["df"]
+    certain = (rate == 0.0) | (rate == 1.0)
+    stand_in = " by Clopper–Pearson" if interval in ("wald", "logit", "arcsine") else ""
+    conditions = [
+        ((n == 0) & (found["n_missing"] == 0), "no members"),
+        ((n == 0) & (found["n_missing"] > 0), "no member has a known outcome"),
+        (
+            certain,
+            f"rate of exactly 0 or 1: no variance, limits{stand_in} use n, review it first",
+        ),
+        (
+            ~certain & (n > 0) & np.isnan(se),
+            "all members in one sampling unit: its variance cannot be estimated",
+        ),
+        (
+            ~certain & (n > 0) & ~np.isnan(se) & ~(df > 0),
+            "no degrees of freedom: one sampling unit with members in each stratum, no limits",
+        ),
+        (~certain & (se == 0.0), "the standard error is zero"),
+    ]
+    notes = [[text for flag, text in conditions if flag[row]] for row in range(rate.size)]
+    return tuple("; ".join(row) for row in notes)

@@ -1,0 +1,140 @@
+"""Where a table's rates come from: totals, their spread, and the function that makes rates."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from svyrates.totals import (
+    Estimates,
+    RatesOfSides,
+    Spread,
+    UnitSupport,
+    UnitTotals,
+    blocks,
+)
+
+__all__ = ["CrudeRates", "SideRates"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.intp]
+SpreadKind = Literal["design", "unstratified", "independent-records"]
+
+
+@dataclass(frozen=True, slots=True)
+class SideRates:
+    """Rates of a list of sides (groups, unions, everyone, everyone less a group).
+
+    Attributes
+    ----------
+    n, y, weighted_n, squared_weights : (m,) members, successes, weighted members and Σw²
+    rate, unweighted : (m,) weighted and unweighted rates; NaN where empty
+    stacked : Estimates of `[rate | unweighted]`, shape (2m,)
+    units, strata : (m,) first-stage units and strata with a member
+    """
+
+    n: FloatArray
+    y: FloatArray
+    weighted_n: FloatArray
+    squared_weights: FloatArray
+    rate: FloatArray
+    unweighted: FloatArray
+    stacked: Estimates
+    units: IntArray
+    strata: IntArray
+
+    @property
+    def kish_factor(self) -> FloatArray:
+        """`n Σw²/(Σw)²`, the variance inflation from unequal weights alone (Kish 1992)."""
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return self.n * self.squared_weights / self.weighted_n**2
+
+    @property
+    def certain(self) -> NDArray[np.bool_]:
+        """Sides whose rate is exactly 0 or 1, so that its variance is undefined."""
+        return np.asarray((self.n > 0) & ((self.y == 0) | (self.y == self.n)))
+
+
+@dataclass(frozen=True)
+class CrudeRates:
+    """Weighted subgroup rates `p = Y/N` of one block of cells.
+
+    Attributes
+    ----------
+    units : UnitTotals of the cells
+    support : UnitSupport of the cells
+    squared_weights : (cells,) Σw² of the members
+    design_df : units minus strata of the whole design
+    """
+
+    units: UnitTotals
+    support: UnitSupport
+    squared_weights: FloatArray
+    design_df: int
+
+    @classmethod
+    def of(cls, units: UnitTotals, design_df: int) -> CrudeRates:
+        """Prepare the rates of a tally."""
+        tally = units.tally
+        by_atom = np.bincount(tally.atom, weights=tally.ww, minlength=tally.pattern.size)
+        of_atom = units.membership[tally.pattern]
+        squares = [of_atom.T @ (by_atom * (level < 2)) for level in tally.level.T]
+        return cls(units, UnitSupport.of(units), np.concatenate(squares), design_df)
+
+    @property
+    def n_cells(self) -> int:
+        """Cells in the block."""
+        return int(self.support.members.shape[1])
+
+    def estimates(self, sides: Any, kind: SpreadKind = "design") -> Estimates:
+        """Estimates of `[rate | unweighted]` of each row of `sides` (m, cells)."""
+        totals = Estimates(self.units.totals, self._spread(kind))
+        return totals.apply(RatesOfSides(sides))
+
+    def sides(self, sides: Any) -> SideRates:
+        """Rates of each row of `sides` (m, cells), a signed sum of cells."""
+        n, y, weighted_n, _ = (np.asarray(sides @ block) for block in blocks(self.units.totals))
+        # Counts are whole: subtraction leaves them exact, and they decide what is empty or certain.
+        n, y = np.rint(n), np.rint(y)
+        stacked = self.estimates(sides)
+        rate, unweighted = np.split(stacked.values, 2)
+        rate = np.where((n > 0) & (y == 0), 0.0, np.where((n > 0) & (y == n), 1.0, rate))
+        units, strata = self.support.domain(sides)
+        return SideRates(
+            n,
+            y,
+            np.where(n > 0, weighted_n, 0.0),
+            np.asarray(sides @ self.squared_weights),
+            rate,
+            unweighted,
+            stacked,
+            units,
+            strata,
+        )
+
+    def _spread(self, kind: SpreadKind) -> Spread:
+        if kind == "design":
+            return self.units.spread
+        if kind == "unstratified":
+            return self.units.unstratified()
+        return self.units.independent_records()
+
+    def row(self, cells: dict[int, float]) -> Any:
+        """One side as a sparse row: cell -> sign."""
+        index = np.fromiter(cells, dtype=np.intp)
+        return sparse.csr_array(
+            (np.array(list(cells.values())), (np.zeros_like(index), index)),
+            shape=(1, self.n_cells),
+        )
+
+    def rows_of(self, cells: list[int]) -> Any:
+        """Sides that are single cells."""
+        index = np.asarray(cells, dtype=np.intp)
+        return sparse.csr_array(
+            (np.ones(index.size), (np.arange(index.size), index)),
+            shape=(index.size, self.n_cells),
+        )

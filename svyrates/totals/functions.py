@@ -1,0 +1,83 @@
+"""Smooth functions of totals that the package uses, with their sparse derivatives."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from svyrates.totals.linearized import blocks
+
+__all__ = ["Linear", "RatesOfSides"]
+
+FloatArray = NDArray[np.float64]
+
+# Everyone less a group may leave rounding noise of weights, but never half a person.
+_NOBODY = 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class Linear:
+    """`x -> matrix @ x`, `matrix` (m, k) sparse."""
+
+    matrix: Any
+
+    def value(self, at: FloatArray) -> FloatArray:
+        """Value at (k,) or (r, k)."""
+        return np.asarray((self.matrix @ at.T).T)
+
+    def jacobian(self, at: FloatArray) -> Any:  # noqa: ARG002 - the same everywhere
+        """The matrix itself."""
+        return self.matrix
+
+
+@dataclass(frozen=True, slots=True)
+class RatesOfSides:
+    """Weighted and unweighted rates of sides: totals -> `[p_1 … p_m | u_1 … u_m]`.
+
+    A side is a signed sum of cells, `sides` (m, cells): a group, a union of groups, everyone, or
+    everyone less a group. `p = Y/N`, `u = y/n`; NaN where the side is empty, and then without
+    derivatives.
+    """
+
+    sides: Any
+
+    def value(self, at: FloatArray) -> FloatArray:
+        """Rates at totals (4 cells,) or (r, 4 cells)."""
+        n, y, weighted_n, weighted_y = (self._summed(block) for block in blocks(at))
+        filled = n > _NOBODY
+        return np.concatenate(
+            (_ratio(weighted_y, weighted_n, filled), _ratio(y, n, filled)), axis=-1
+        )
+
+    def jacobian(self, at: FloatArray) -> Any:
+        """`∂p/∂Y = 1/N` and `∂p/∂N = -p/N` along each side."""
+        n, y, weighted_n, weighted_y = (self._summed(block) for block in blocks(at))
+        nothing = sparse.csr_array(self.sides.shape)
+        filled = n > _NOBODY
+        weighted = _derivatives(self.sides, weighted_y, weighted_n, filled)
+        plain = _derivatives(self.sides, y, n, filled)
+        return sparse.block_array(
+            [[nothing, nothing, *weighted], [*plain, nothing, nothing]], format="csr"
+        )
+
+    def _summed(self, block: FloatArray) -> FloatArray:
+        return np.asarray((self.sides @ block.T).T)
+
+
+def _ratio(numerator: FloatArray, denominator: FloatArray, filled: NDArray[np.bool_]) -> FloatArray:
+    nothing = np.full(numerator.shape, np.nan)
+    np.divide(numerator, denominator, out=nothing, where=filled)
+    return nothing
+
+
+def _derivatives(
+    sides: Any, numerator: FloatArray, denominator: FloatArray, filled: NDArray[np.bool_]
+) -> tuple[Any, Any]:
+    inverse = np.divide(1.0, denominator, out=np.zeros_like(denominator), where=filled)
+    by_numerator = sparse.diags_array(inverse) @ sides
+    by_denominator = sparse.diags_array(-numerator * inverse**2) @ sides
+    return by_denominator, by_numerator

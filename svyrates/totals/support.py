@@ -1,0 +1,69 @@
+"""Degrees of freedom: in which sampling units and strata the members of a group sit."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import sparse
+
+from svyrates.totals.linearized import UnitTotals
+
+__all__ = ["UnitSupport"]
+
+IntArray = NDArray[np.intp]
+
+
+@dataclass(frozen=True, slots=True)
+class UnitSupport:
+    """Members per first-stage unit.
+
+    Attributes
+    ----------
+    members : (rows, cells) sparse; members of each cell in each first-stage unit, or in each
+        stratum whose records are the units
+    stratum : (rows,) stratum of each row
+    is_pool : (rows,) whether every member counts as a unit of its own
+    """
+
+    members: Any
+    stratum: IntArray
+    is_pool: NDArray[np.bool_]
+
+    @classmethod
+    def of(cls, totals: UnitTotals) -> UnitSupport:
+        """Read the members off the leaves' unweighted counts."""
+        tree = totals.tree
+        n_cells = totals.leaves.shape[1] // 4
+        counts = totals.leaves[:, :n_cells]
+        # A leaf of depth 0 is a stratum of records; all others belong to a first-stage unit.
+        unit = tree.ancestor(1) if tree.parent else np.full(tree.n_leaves, -1)
+        n_units = tree.parent[0].size if tree.parent else 0
+        row = np.where(unit >= 0, unit, n_units + tree.leaf_node)
+        gather = sparse.csr_array(
+            (np.ones(row.size), (row, np.arange(row.size))),
+            shape=(n_units + tree.n_strata, row.size),
+        )
+        strata = np.arange(tree.n_strata)
+        stratum = np.concatenate((tree.parent[0], strata)) if tree.parent else strata
+        is_pool = np.arange(n_units + tree.n_strata) >= n_units
+        return cls((gather @ counts).tocsr(), stratum, is_pool)
+
+    def domain(self, sides: Any) -> tuple[IntArray, IntArray]:
+        """Units and strata with at least one member, for each row of `sides` (sides, cells).
+
+        A row of `sides` adds up disjoint cells, or takes a cell away from one that holds it.
+        """
+        members = (self.members @ sides.T).tocoo()
+        row, side = members.coords
+        present = members.data > 0.5
+        row, side, found = row[present], side[present], members.data[present]
+        n_sides = sides.shape[0]
+        units = np.bincount(
+            side, weights=np.where(self.is_pool[row], np.rint(found), 1.0), minlength=n_sides
+        )
+        seen = np.unique(side * np.int64(self.stratum.max() + 1) + self.stratum[row])
+        strata = np.bincount(seen // (self.stratum.max() + 1), minlength=n_sides)
+        return units.astype(np.intp), strata.astype(np.intp)

@@ -1,0 +1,23 @@
+"""Numbers, sentences and tables for readers; a leaf that knows no statistics."""
+
+from svyrates.words.escape import display_width, for_html, for_terminal, shorten
+from svyrates.words.numbers import count, fixed, p_value, percent, points, significant
+from svyrates.words.sentences import join_words, plural
+from svyrates.words.table import Column, Table
+
+__all__ = [
+    "Column",
+    "Table",
+    "count",
+    "display_width",
+    "fixed",
+    "for_html",
+    "for_terminal",
+    "join_words",
+    "p_value",
+    "percent",
+    "plural",
+    "points",
+    "shorten",
+    "significant",
+]
