@@ -74,7 +74,7 @@ class Joint:
 def read_joint(block: PairBlock, fixed: float | None, df: str | float) -> Joint:
     """Fetch both sides of every pair in a block."""
     found = block.source.sides(block.sides)
-    covariance = found.stacked.covariance()
+    covariance = found.covariance()
     m = found.rate.size
     plus, minus = block.plus, block.minus
     there = np.where(minus >= 0, minus, 0)

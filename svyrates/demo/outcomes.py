@@ -72,7 +72,8 @@ def laid_out(
         real = np.clip(real, 0.0, 1.0)
         chance = np.sqrt(real * (1.0 - real) / size[lives, each])
         rate[lives, each] = real + chance * _zero_sum(district, random.random(lives.size))
-    wanted = _whole(size * np.clip(rate, 0.0, 1.0), random.random(n_groups))
+    target = np.asarray(size * np.clip(rate, 0.0, 1.0), dtype=np.float64)
+    wanted = _whole(target, random.random(n_groups))
     return _chosen(wanted, cell, random.random(cell.size))
 
 

@@ -18,7 +18,23 @@ __all__ = ["DesignSummary"]
 
 @dataclass(frozen=True, slots=True)
 class DesignSummary:
-    """The facts of a design in reading order: `facts` pairs a label with its value."""
+    """What a design found in its columns; prints as a small table.
+
+    Attributes
+    ----------
+    facts : pairs of a label and its value, in reading order
+    remarks : what deserves a look
+
+    Examples
+    --------
+    >>> import svyrates as sr
+    >>> survey = sr.demo_survey(wave="2024")
+    >>> design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
+    >>> dict(design.summary().facts)["degrees of freedom"]
+    '88'
+
+    112 blocks less 24 districts leave 88 degrees of freedom.
+    """
 
     facts: tuple[tuple[str, str], ...]
     remarks: tuple[str, ...]

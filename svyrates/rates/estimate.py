@@ -193,8 +193,7 @@ def variances(
     found: SideRates, source: CrudeRates, df: str | float | None
 ) -> tuple[FloatArray, FloatArray]:
     """Variance of each side's rate, NaN where undefined, and its degrees of freedom."""
-    m = found.rate.size
-    variance = found.stacked.variance()[:m]
+    variance = found.variance()
     undefined = (found.n == 0) | found.certain | ((variance == 0.0) & (found.units < 2))
     freedom = freedom_of(found, source, df)
     return np.where(undefined, np.nan, variance), np.where(found.n > 0, freedom, np.nan)

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from svyrates.totals import (
+    ZERO,
     Estimates,
     RatesOfSides,
     Spread,
@@ -46,6 +47,27 @@ class SideRates:
     stacked: Estimates
     units: IntArray
     strata: IntArray
+
+    @property
+    def nothing(self) -> FloatArray:
+        """Variances of `[rate | unweighted]` below which rounding is all there is, shape (2m,)."""
+        with np.errstate(invalid="ignore", divide="ignore"):
+            rates = np.concatenate((self.rate, self.unweighted))
+            return ZERO * rates * (1.0 - rates) / np.tile(self.n, 2)
+
+    def variance(self) -> FloatArray:
+        """Variances of the weighted rates, shape (m,); what rounding leaves of zero is zero."""
+        m = self.rate.size
+        variance = self.stacked.variance()[:m]
+        return np.where(variance < self.nothing[:m], 0.0, variance)
+
+    def covariance(self) -> FloatArray:
+        """Covariance of `[rate | unweighted]`, shape (2m, 2m), with the same rule."""
+        matrix = self.stacked.covariance()
+        tiny = matrix.diagonal() < self.nothing
+        matrix[tiny, :] = 0.0
+        matrix[:, tiny] = 0.0
+        return matrix
 
     @property
     def kish_factor(self) -> FloatArray:

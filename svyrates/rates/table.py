@@ -150,7 +150,7 @@ class RateTable:
                 [np.arange(o * n_groups, (o + 1) * n_groups) for o in block.outcomes]
             )
             sides = block.source.rows_of(self.cells_of(block))
-            here = block.source.sides(sides).stacked.covariance()[: rows.size, : rows.size]
+            here = block.source.sides(sides).covariance()[: rows.size, : rows.size]
             matrix[np.ix_(rows, rows)] = here
         undefined = np.isnan(self.se)
         matrix[undefined, :] = np.nan
