@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field, fields, replace
+from dataclasses import dataclass, fields, replace
 from os import PathLike
 from pathlib import Path
 from typing import Any
@@ -29,7 +29,7 @@ _NUMBERS = (
 )  # fmt: skip
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class ComparisonTable:
     """Comparisons of rates, one row per pair; all arrays have shape (pairs,).
 
@@ -103,8 +103,8 @@ class ComparisonTable:
     variant: str
     level: float
     fixed: float | None
-    rates: RateTable = field(repr=False)
-    blocks: tuple[PairBlock, ...] = field(repr=False)
+    rates: RateTable
+    blocks: tuple[PairBlock, ...]
 
     def __len__(self) -> int:
         return len(self.group)
@@ -273,7 +273,7 @@ class ComparisonTable:
         """Plain text, at most `width` columns wide."""
         return self.table(percent=percent).text(width)
 
-    def __str__(self) -> str:
+    def __repr__(self) -> str:
         return self.text()
 
     def _repr_html_(self) -> str:

@@ -195,7 +195,12 @@ def _code_categories(series: nw.Series[Any]) -> Codes:
 def _code_values(series: nw.Series[Any], role: str, name: str) -> Codes:
     native = series.to_native()
     if isinstance(native, pd.Series):
-        first_seen, uniques = pd.factorize(native, use_na_sentinel=True)
+        try:
+            first_seen, uniques = pd.factorize(native, use_na_sentinel=True)
+        except TypeError as problem:
+            raise ColumnFault(f"{role} {name!r} holds nested values; it needs plain ones.") from (
+                problem
+            )
         levels = [_plain(level) for level in uniques]
         order = _sorted_positions(levels, role, name)
         rank = np.empty(len(order) + 1, dtype=np.int32)

@@ -17,6 +17,8 @@ __all__ = ["LonePolicy", "collapse", "lone_strata"]
 
 IntArray = NDArray[np.intp]
 
+_SHOWN = 6
+
 
 @dataclass(frozen=True, slots=True)
 class LonePolicy:
@@ -65,7 +67,8 @@ def collapse(
             f"{some(left)}. Name a partner for each."
         )
     named = [" with ".join(labels[stratum] for stratum in group) for group in groups]
-    done = f"collapsed into {len(groups)} joint strata ({some(named, 4)})"
+    more = f"; and {len(named) - _SHOWN} more" if len(named) > _SHOWN else ""
+    done = f"joined: {'; '.join(named[:_SHOWN])}{more}"
     return merged, LonePolicy(tuple(labels[stratum] for stratum in lone), done)
 
 

@@ -188,9 +188,10 @@ class SampleDesign:
 
 
 def _names(given: str | Sequence[str] | None) -> tuple[str, ...]:
+    """Column names as a tuple; what is no name is left for the reader of columns to refuse."""
     if given is None:
         return ()
-    return (given,) if isinstance(given, str) else tuple(given)
+    return tuple(given) if isinstance(given, Sequence) and not isinstance(given, str) else (given,)
 
 
 def _read_weights(frame: Frame, name: str | None, faults: list[str]) -> FloatArray:
@@ -201,7 +202,9 @@ def _read_weights(frame: Frame, name: str | None, faults: list[str]) -> FloatArr
         return np.ones(len(frame))
     weights = np.asarray(values, dtype=np.float64)
     # One sum finds NaN and infinity, one minimum finds negatives: the usual file is clean.
-    if np.isfinite(weights.sum()) and weights.min() >= 0.0:
+    with np.errstate(over="ignore", invalid="ignore"):
+        clean = bool(np.isfinite(weights.sum()) and weights.min() >= 0.0)
+    if clean:
         if weights.max() == 0.0:
             faults.append(f"weight {name!r} is zero in all {weights.size} rows.")
         return weights

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, fields
 from os import PathLike
 from pathlib import Path
 from typing import Any
@@ -49,7 +49,7 @@ class RateBlock:
     source: CrudeRates
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class RateTable:
     """Rates of one or several outcomes in one or several groups.
 
@@ -110,8 +110,8 @@ class RateTable:
     df_rule: str | float
     coverage: Coverage
     weights_are_relative: bool
-    overlapping: bool = field(repr=False)
-    blocks: tuple[RateBlock, ...] = field(repr=False)
+    overlapping: bool
+    blocks: tuple[RateBlock, ...]
 
     @property
     def variance(self) -> FloatArray:
@@ -231,7 +231,7 @@ class RateTable:
         """Plain text, at most `width` columns wide."""
         return self.table(percent=percent).text(width)
 
-    def __str__(self) -> str:
+    def __repr__(self) -> str:
         return self.text()
 
     def _repr_html_(self) -> str:
