@@ -116,9 +116,7 @@ def compare_rates(
     held, blocks, fixed = plan_pairs(rates, versus, within)
     scale = MEASURES[measure]
     null_value = scale.unity if null is None else float(null)
-    on_scale = (
-        float(scale.forward(np.array([null_value + 0.0]))[0]) if _is_log(measure) else (null_value)
-    )
+    on_scale = float(np.log(null_value)) if _is_log(measure) else null_value
     settings = (measure, alternative, on_scale, limits, simple, level)
     parts = [_compare_block(rates, block, fixed, settings) for block in blocks]
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}

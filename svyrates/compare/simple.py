@@ -130,15 +130,21 @@ def simple_formula(
         else:
             error_rate = _rejection(z, se, b, s_u, alternative)
         coverage = _coverage(z, se, b, s_u, alternative)
-    real = joint.n[~np.isnan(joint.n).all(axis=1)]
-    rates = joint.values[2:][: real.shape[0]]
-    few = np.asarray((real * rates * (1.0 - rates) < ENOUGH_VARIANCE).any(axis=0))
-    share = real / joint.weighted_n[: real.shape[0]]
-    large = np.asarray((share >= SMALL_SHARE).any(axis=0) & (not weights_are_relative))
+    few, large = _conditions(joint, weights_are_relative)
     return SimpleFormula(
         scale.back(on_scale), se, scale.back(low), scale.back(high), p, on_scale,
         shift, shift_p, s_u, error_rate, coverage, few, large,
     )  # fmt: skip
+
+
+def _conditions(joint: Joint, weights_are_relative: bool) -> tuple[BoolArray, BoolArray]:
+    """Pairs where a group has np(1 - p) under 10, or is 5% or more of its population."""
+    groups = 1 if joint.fixed is not None else 2
+    n, rate = joint.n[:groups], joint.values[2 : 2 + groups]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        few = (n * rate * (1.0 - rate) < ENOUGH_VARIANCE).any(axis=0)
+        large = (n / joint.weighted_n[:groups] >= SMALL_SHARE).any(axis=0)
+    return np.asarray(few), np.asarray(large & (not weights_are_relative))
 
 
 def normal_tail(statistic: FloatArray, alternative: str) -> FloatArray:
