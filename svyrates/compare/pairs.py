@@ -9,11 +9,11 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.source import CrudeRates
 from svyrates.rates.table import RateTable
+from svyrates.totals import stack_rows
 
 __all__ = ["EVERYONE", "EVERYONE_ELSE", "PairBlock", "Reference", "plan_pairs"]
 
@@ -207,12 +207,12 @@ def _block(
         plus, minus = np.arange(k), np.full(k, -1)
         named = [f"{float(versus):g}"]
     elif kind == "everyone":
-        own = sparse.vstack((own, everyone), format="csr")
+        own = stack_rows([own, everyone])
         plus, minus = np.arange(k), np.full(k, k)
         named = [*labels, EVERYONE.value]
     else:
-        rest = sparse.csr_array(np.ones((k, 1))) @ everyone - own
-        own = sparse.vstack((own, rest), format="csr")
+        rest = everyone[np.zeros(k, dtype=np.intp)] - own
+        own = stack_rows([own, rest])
         plus, minus = np.arange(k), np.arange(k, 2 * k)
         named = [*labels, *[EVERYONE_ELSE.value] * k]
     return PairBlock(

@@ -123,8 +123,8 @@ def code_series(series: nw.Series[Any], role: str, name: str) -> Codes:
     """Code one series; the order of labels does not depend on the library it comes from."""
     dtype = series.dtype
     if dtype.is_integer():
-        missing = series.is_null()
-        if missing.any():
+        missing = None if is_plain(series) else series.is_null()
+        if missing is not None and missing.any():
             return _code_integers(series.fill_null(0).to_numpy(), missing.to_numpy())
         return _code_integers(series.to_numpy(), None)
     if dtype == nw.Boolean:
@@ -139,6 +139,12 @@ def code_series(series: nw.Series[Any], role: str, name: str) -> Codes:
     if dtype in (nw.List, nw.Array, nw.Struct):
         raise ColumnFault(f"{role} {name!r} holds nested values ({dtype}); it needs plain ones.")
     return _code_values(series, role, name)
+
+
+def is_plain(series: nw.Series[Any]) -> bool:
+    """Whether the series is a numpy array inside, whose integers cannot be missing."""
+    native = series.to_native()
+    return isinstance(native, pd.Series) and isinstance(native.dtype, np.dtype)
 
 
 def _code_integers(values: NDArray[Any], missing: BoolArray | None) -> Codes:

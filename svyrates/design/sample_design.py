@@ -228,8 +228,8 @@ def _read_weights(frame: Frame, name: str | None, faults: list[str]) -> FloatArr
 
 def _complete_codes(frame: Frame, name: str, role: str) -> Codes:
     coded = code_column(frame, name, role)
-    missing = int(np.count_nonzero(coded.codes < 0))
-    if missing:
+    if coded.codes.size and coded.codes.min() < 0:
+        missing = int(np.count_nonzero(coded.codes < 0))
         first = int(np.argmax(coded.codes < 0))
         raise ColumnFault(
             f"{role} {name!r} is missing in {missing} of {len(frame)} rows (first: row {first}; "
@@ -368,6 +368,8 @@ def _cross(strata: list[Codes], n_records: int) -> tuple[NDArray[np.int32], tupl
     """Cross the stratum columns and keep the combinations that occur."""
     if not strata:
         return np.zeros(n_records, dtype=np.int32), ("all",)
+    if len(strata) == 1 and _all_occur(strata[0]):
+        return strata[0].codes, tuple(map(str, strata[0].levels))
     stratum = np.zeros(n_records, dtype=np.int32)
     names: list[str] = [""]
     for position, coded in enumerate(strata):
@@ -381,3 +383,10 @@ def _cross(strata: list[Codes], n_records: int) -> tuple[NDArray[np.int32], tupl
         ]
         stratum = combined
     return stratum, tuple(names)
+
+
+def _all_occur(coded: Codes) -> bool:
+    """Whether every level has a record; categories may be declared and stay empty."""
+    seen = np.zeros(len(coded.levels), dtype=bool)
+    seen[coded.codes] = True
+    return bool(seen.all())

@@ -20,6 +20,7 @@ from svyrates.design.columns import (
     code_column,
     column,
     fault_or,
+    is_plain,
     read_mask,
 )
 from svyrates.errors import some
@@ -140,7 +141,7 @@ def _position(levels: Sequence[object], wanted: object) -> int | None:
 
 def _binary(series: nw.Series[Any], name: str) -> LevelArray:
     """Levels of a 0/1 or boolean column."""
-    if series.dtype.is_integer() and not series.is_null().any():
+    if series.dtype.is_integer() and (is_plain(series) or not series.is_null().any()):
         values = series.to_numpy()
         if values.min() >= 0 and values.max() <= 1:
             return values.astype(np.int8)

@@ -23,6 +23,8 @@ __all__ = ["CrudeRates", "SideRates"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
+_SMALL_SIDES = 20_000
+
 SpreadKind = Literal["design", "unstratified", "independent-records"]
 
 
@@ -142,21 +144,21 @@ class CrudeRates:
         if kind == "design":
             return self.units.spread
         if kind == "unstratified":
-            return self.units.unstratified()
-        return self.units.independent_records()
+            return self.units.unstratified
+        return self.units.independent_records
 
     def row(self, cells: dict[int, float]) -> Any:
         """One side as a sparse row: cell -> sign."""
         index = np.fromiter(cells, dtype=np.intp)
-        return sparse.csr_array(
-            (np.array(list(cells.values())), (np.zeros_like(index), index)),
-            shape=(1, self.n_cells),
-        )
+        values = np.array(list(cells.values()))
+        return self._rows(np.zeros_like(index), index, values, 1)
 
     def rows_of(self, cells: list[int]) -> Any:
         """Sides that are single cells."""
         index = np.asarray(cells, dtype=np.intp)
-        return sparse.csr_array(
-            (np.ones(index.size), (np.arange(index.size), index)),
-            shape=(index.size, self.n_cells),
-        )
+        return self._rows(np.arange(index.size), index, np.ones(index.size), index.size)
+
+    def _rows(self, row: IntArray, cell: IntArray, values: FloatArray, n_rows: int) -> Any:
+        matrix = sparse.csr_array((values, (row, cell)), shape=(n_rows, self.n_cells))
+        # The derivatives of sides are eight times as many elements, so sides turn sparse early.
+        return matrix.toarray() if n_rows * self.n_cells <= _SMALL_SIDES else matrix

@@ -7,6 +7,7 @@ outcome. The sums are additive, so they can be taken in any order and in any num
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -20,6 +21,7 @@ FloatArray = NDArray[np.float64]
 
 # Up to this many cells per record a dense table of all pairs is cheaper than hashing the pairs.
 _DENSE_CELLS = 2
+_FEW_ATOMS = 8192
 NO, YES, MISSING = 0, 1, 2
 
 
@@ -68,31 +70,29 @@ def tally_records(
     Tally
     """
     atom, n_atoms, decode = _atoms(pattern, n_patterns, levels)
-    # Records that answer nothing here fall into one cell more, which is cut off afterwards.
-    counted = pattern >= 0
-    if weights.min() <= 0.0:
-        counted &= weights > 0.0
     size = n_leaves * n_atoms
     pair = leaf.astype(np.int64)
     pair *= n_atoms
     pair += atom
-    if not counted.all():
-        pair[~counted] = size
-    n: FloatArray
+    # Records that answer nothing here fall into one cell more, which is cut off afterwards.
+    everyone = bool(pattern.min() >= 0 and weights.min() > 0.0)
+    if not everyone:
+        pair[(pattern < 0) | (weights <= 0.0)] = size
+    squares = weights * weights
     if size <= _DENSE_CELLS * pair.size + 1024:
         counts = np.bincount(pair, minlength=size + 1)[:size]
         pairs = np.flatnonzero(counts)
         n = counts[pairs].astype(np.float64)
         w = np.bincount(pair, weights=weights, minlength=size + 1)[pairs]
-        ww = np.bincount(pair, weights=weights * weights, minlength=size + 1)[pairs]
+        ww = np.bincount(pair, weights=squares, minlength=size + 1)[pairs]
     else:
-        kept = np.flatnonzero(counted)
-        number, found = pd.factorize(pair[kept], sort=True)
+        number, found = pd.factorize(pair, sort=True)
         pairs = np.asarray(found)
-        some = weights[kept]
-        n = np.bincount(number, minlength=pairs.size).astype(np.float64)
-        w = np.bincount(number, weights=some, minlength=pairs.size)
-        ww = np.bincount(number, weights=some * some, minlength=pairs.size)
+        kept = slice(0, pairs.size - (not everyone))
+        pairs = pairs[kept]
+        n = np.bincount(number)[kept].astype(np.float64)
+        w = np.bincount(number, weights=weights)[kept]
+        ww = np.bincount(number, weights=squares)[kept]
     of_leaf, of_atom = np.divmod(pairs, n_atoms)
     of_pattern, level = decode
     return Tally(
@@ -102,16 +102,20 @@ def tally_records(
 
 def _atoms(
     pattern: CodeArray, n_patterns: int, levels: list[NDArray[np.int8]]
-) -> tuple[IntArray, int, tuple[IntArray, NDArray[np.int8]]]:
+) -> tuple[NDArray[Any], int, tuple[IntArray, NDArray[np.int8]]]:
     """Number the atoms: densely for few outcomes, else only the joint patterns that occur."""
     n_dense = n_patterns * 3 ** len(levels)
-    code = np.maximum(pattern, 0).astype(np.int64)
-    if n_dense <= 4096 or len(levels) == 1:
+    if n_dense <= _FEW_ATOMS:
+        # Small numbers in small integers: much of the time goes into moving them.
+        small = pattern.astype(np.int16)
         for level in levels:
-            code *= 3
-            code += level
-        numbers = np.arange(n_dense, dtype=np.intp)
-        return code, n_dense, _decode(numbers, len(levels))
+            small *= 3
+            small += level
+        return small, n_dense, _decode(np.arange(n_dense, dtype=np.intp), len(levels))
+    code = np.maximum(pattern, 0).astype(np.int64)
+    if len(levels) == 1:
+        code = code * 3 + levels[0]
+        return code, n_dense, _decode(np.arange(n_dense, dtype=np.intp), 1)
     occurring = [np.arange(n_patterns)]
     level_parts: list[NDArray[np.intp]] = []
     for level in levels:

@@ -2,8 +2,10 @@
 
 from svyrates.totals.estimates import ZERO, Estimates, SmoothFunction, Spread, Support
 from svyrates.totals.functions import Linear, RatesOfSides
-from svyrates.totals.linearized import LinearizedSpread, UnitTotals, blocks
+from svyrates.totals.linearized import LinearizedSpread
+from svyrates.totals.matrices import lighter, stack_rows
 from svyrates.totals.support import UnitSupport
+from svyrates.totals.unit_totals import UnitTotals, blocks
 
 __all__ = [
     "ZERO",
@@ -17,4 +19,6 @@ __all__ = [
     "UnitSupport",
     "UnitTotals",
     "blocks",
+    "lighter",
+    "stack_rows",
 ]

@@ -9,7 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
-from svyrates.totals.linearized import blocks
+from svyrates.totals.matrices import scaled
+from svyrates.totals.unit_totals import blocks
 
 __all__ = ["Linear", "RatesOfSides"]
 
@@ -56,12 +57,15 @@ class RatesOfSides:
     def jacobian(self, at: FloatArray) -> Any:
         """`∂p/∂Y = 1/N` and `∂p/∂N = -p/N` along each side."""
         n, y, weighted_n, weighted_y = (self._summed(block) for block in blocks(at))
-        nothing = sparse.csr_array(self.sides.shape)
         filled = n > _NOBODY
         weighted = _derivatives(self.sides, weighted_y, weighted_n, filled)
         plain = _derivatives(self.sides, y, n, filled)
+        if not sparse.issparse(self.sides):
+            nothing = np.zeros((self.sides.shape[0], 2 * self.sides.shape[1]))
+            return np.block([[nothing, *weighted], [*plain, nothing]])
+        nowhere = sparse.csr_array(self.sides.shape)
         return sparse.block_array(
-            [[nothing, nothing, *weighted], [*plain, nothing, nothing]], format="csr"
+            [[nowhere, nowhere, *weighted], [*plain, nowhere, nowhere]], format="csr"
         )
 
     def _summed(self, block: FloatArray) -> FloatArray:
@@ -78,6 +82,4 @@ def _derivatives(
     sides: Any, numerator: FloatArray, denominator: FloatArray, filled: NDArray[np.bool_]
 ) -> tuple[Any, Any]:
     inverse = np.divide(1.0, denominator, out=np.zeros_like(denominator), where=filled)
-    by_numerator = sparse.diags_array(inverse) @ sides
-    by_denominator = sparse.diags_array(-numerator * inverse**2) @ sides
-    return by_denominator, by_numerator
+    return scaled(-numerator * inverse**2, sides), scaled(inverse, sides)

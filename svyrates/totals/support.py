@@ -9,7 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
-from svyrates.totals.linearized import UnitTotals
+from svyrates.totals.matrices import lighter
+from svyrates.totals.unit_totals import UnitTotals
 
 __all__ = ["UnitSupport"]
 
@@ -38,32 +39,33 @@ class UnitSupport:
         tree = totals.tree
         n_cells = totals.leaves.shape[1] // 4
         counts = totals.leaves[:, :n_cells]
+        strata = np.arange(tree.n_strata)
+        if not tree.parent:
+            return cls(lighter(counts), tree.leaf_node, np.ones(tree.n_leaves, dtype=bool))
         # A leaf of depth 0 is a stratum of records; all others belong to a first-stage unit.
-        unit = tree.ancestor(1) if tree.parent else np.full(tree.n_leaves, -1)
-        n_units = tree.parent[0].size if tree.parent else 0
+        unit = tree.ancestor(1)
+        n_units = tree.parent[0].size
         row = np.where(unit >= 0, unit, n_units + tree.leaf_node)
         gather = sparse.csr_array(
             (np.ones(row.size), (row, np.arange(row.size))),
             shape=(n_units + tree.n_strata, row.size),
         )
-        strata = np.arange(tree.n_strata)
-        stratum = np.concatenate((tree.parent[0], strata)) if tree.parent else strata
+        stratum = np.concatenate((tree.parent[0], strata))
         is_pool = np.arange(n_units + tree.n_strata) >= n_units
-        return cls((gather @ counts).tocsr(), stratum, is_pool)
+        return cls(lighter(gather @ counts), stratum, is_pool)
 
     def domain(self, sides: Any) -> tuple[IntArray, IntArray]:
         """Units and strata with at least one member, for each row of `sides` (sides, cells).
 
         A row of `sides` adds up disjoint cells, or takes a cell away from one that holds it.
         """
-        members = (self.members @ sides.T).tocoo()
-        row, side = members.coords
-        present = members.data > 0.5
-        row, side, found = row[present], side[present], members.data[present]
-        n_sides = sides.shape[0]
-        units = np.bincount(
-            side, weights=np.where(self.is_pool[row], np.rint(found), 1.0), minlength=n_sides
-        )
-        seen = np.unique(side * np.int64(self.stratum.max() + 1) + self.stratum[row])
-        strata = np.bincount(seen // (self.stratum.max() + 1), minlength=n_sides)
-        return units.astype(np.intp), strata.astype(np.intp)
+        members = self.members @ sides.T
+        present = sparse.coo_array(members > 0.5)
+        row, side = present.coords
+        found = members[row, side] if sparse.issparse(members) else members[present.coords]
+        n_sides, n_strata = sides.shape[0], int(self.stratum.max()) + 1
+        each = np.where(self.is_pool[row], np.rint(np.asarray(found).ravel()), 1.0)
+        units = np.bincount(side, weights=each, minlength=n_sides)
+        seen = np.zeros((n_sides, n_strata), dtype=bool)
+        seen[side, self.stratum[row]] = True
+        return units.astype(np.intp), seen.sum(axis=1)

@@ -7,8 +7,9 @@ import pytest
 from hypothesis import HealthCheck, assume, given, settings
 
 import svyrates as sr
+from svyrates.rates import source
 from svyrates.tally import memory
-from svyrates.totals import linearized
+from svyrates.totals import matrices
 from tests.reference import Survey
 from tests.strategies import frame_of, surveys
 
@@ -27,8 +28,9 @@ def test_sparse_and_hashed_equal_dense(survey: Survey, monkeypatch: pytest.Monke
 
     dense = ask()
     with monkeypatch.context() as patch:
-        patch.setattr(linearized, "_DENSE_ELEMENTS", 0)
-        patch.setattr(linearized, "_DENSE_SHARE", 2.0)
+        patch.setattr(matrices, "DENSE_ELEMENTS", -1)
+        patch.setattr(matrices, "DENSE_SHARE", 2.0)
+        patch.setattr(source, "_SMALL_SIDES", -1)
         patch.setattr(memory, "_DENSE_CELLS", -1)
         frugal = ask()
         sparse_covariance = frugal.covariance.to_numpy()
