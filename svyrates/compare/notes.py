@@ -76,10 +76,11 @@ def comparison_notes(
             large_share,
         ),
     ]
-    flags = np.stack([flag for flag, _ in conditions], axis=1)
-    kinds, which = np.unique(flags, axis=0, return_inverse=True)
+    # Few combinations occur among many pairs: each is worded once.
+    code = sum(flag.astype(np.intp) << bit for bit, (flag, _) in enumerate(conditions))
+    kinds, which = np.unique(code, return_inverse=True)
     texts = [
-        "; ".join(text for flag, (_, text) in zip(kind, conditions, strict=True) if flag)
-        for kind in kinds
+        "; ".join(text for bit, (_, text) in enumerate(conditions) if kind >> bit & 1)
+        for kind in kinds.tolist()
     ]
-    return np.array(texts, dtype=object)[which.ravel()]
+    return np.array(texts, dtype=object)[which]

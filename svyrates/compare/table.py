@@ -111,13 +111,14 @@ class ComparisonTable:
 
     def label_columns(self) -> tuple[list[str], list[tuple[object, ...]]]:
         """Names and values of the columns held fixed; the outcome only if there are several."""
-        shown = [
-            position
-            for position, name in enumerate(self.held)
-            if name != "outcome" or len(self.rates.outcomes) > 1
-        ]
+        shown = self._shown()
         names = [self.held[position] for position in shown]
         return names, [tuple(level[position] for position in shown) for level in self.levels]
+
+    def _shown(self) -> list[int]:
+        """Positions of the columns held fixed that a reader needs to see."""
+        several = len(self.rates.outcomes) > 1
+        return [i for i, name in enumerate(self.held) if name != "outcome" or several]
 
     def to_frame(self) -> pd.DataFrame:
         """All columns of the table as a pandas frame, one row per comparison.
@@ -237,8 +238,9 @@ class ComparisonTable:
 
     def title_of(self, row: int) -> str:
         """Short name of a comparison, such as "owner versus rent-free (region North)"."""
-        names, rows = self.label_columns()
-        level = ", ".join(f"{name} {label}" for name, label in zip(names, rows[row], strict=True))
+        level = ", ".join(
+            f"{self.held[position]} {self.levels[row][position]}" for position in self._shown()
+        )
         title = f"{self.group[row]} versus {self.versus[row]}"
         return f"{title} ({level})" if level else title
 

@@ -19,7 +19,7 @@ from svyrates.rates.question import (
 )
 from svyrates.rates.source import CrudeRates, SideRates
 from svyrates.rates.table import Coverage, RateBlock, RateTable
-from svyrates.tally import Tally, tally_records
+from svyrates.tally import tally_records
 from svyrates.totals import UnitTotals
 
 __all__ = ["estimate_rates"]
@@ -124,7 +124,7 @@ def estimate_rates(
         source = CrudeRates.of(units, design.df)
         block = RateBlock(positions, source)
         blocks.append(block)
-        parts.append(_measure(block, grouping, tally, df))
+        parts.append(_measure(block, grouping, df))
     return _assemble(
         design, outcomes, grouping, coverage, blocks, parts, interval, level, df or "domain"
     )
@@ -159,9 +159,7 @@ def _in_scope(
     return pattern, Coverage(design.n_records, n_zero, n_outside, n_where_unknown, n_unknown)
 
 
-def _measure(
-    block: RateBlock, grouping: Grouping, tally: Tally, df: str | float | None
-) -> dict[str, FloatArray]:
+def _measure(block: RateBlock, grouping: Grouping, df: str | float | None) -> dict[str, FloatArray]:
     """Everything about the rows of one block but their limits, outcomes slowest."""
     source = block.source
     n_cells = grouping.membership.shape[1]
@@ -171,15 +169,12 @@ def _measure(
         for group in range(grouping.n_groups)
     ]
     found = source.sides(source.rows_of(cells))
-    n_atoms = tally.pattern.size
-    by_atom = np.bincount(tally.atom, weights=tally.n, minlength=n_atoms)
-    of_atom = grouping.membership[tally.pattern][:, : grouping.n_groups]
-    n_missing = [of_atom.T @ (by_atom * (level == 2)) for level in tally.level.T]
+    n_missing = source.units.by_cell(source.units.tally.n, answered=False)[cells]
     variance, df_values = variances(found, source, df)
     return {
         "n": found.n,
         "n_success": found.y,
-        "n_missing": np.concatenate(n_missing),
+        "n_missing": n_missing,
         "weighted_n": found.weighted_n,
         "rate": found.rate,
         "se": np.sqrt(variance),

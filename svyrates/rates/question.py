@@ -53,7 +53,7 @@ class Grouping:
     columns : names of the grouping columns; empty for everyone in one group
     labels : one tuple of labels per group, in the order of the table
     pattern : (records,) grouping pattern, -1 where the group is unknown
-    membership : (patterns, cells) sparse; the groups come first among the cells
+    membership : (patterns, cells) sparse, or an array of bool for masks; the groups come first
     overlapping : whether a record may be in several groups or in none; the last cell is then
         everyone with known masks
     """
@@ -246,6 +246,5 @@ def _overlapping(frame: Frame, by: Mapping[Any, Any], faults: list[str]) -> Grou
     cells = np.column_stack((members, np.ones(len(members), dtype=bool)))
     codes = pattern.astype(np.int32)
     codes[unknown] = -1
-    membership = sparse.csr_array(cells.astype(np.float64))
     labels = tuple((str(name),) for name in by)
-    return Grouping(("group",), labels, codes, membership, True)
+    return Grouping(("group",), labels, codes, cells, True)

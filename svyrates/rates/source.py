@@ -103,11 +103,8 @@ class CrudeRates:
     @classmethod
     def of(cls, units: UnitTotals, design_df: int) -> CrudeRates:
         """Prepare the rates of a tally."""
-        tally = units.tally
-        by_atom = np.bincount(tally.atom, weights=tally.ww, minlength=tally.pattern.size)
-        of_atom = units.membership[tally.pattern]
-        squares = [of_atom.T @ (by_atom * (level < 2)) for level in tally.level.T]
-        return cls(units, UnitSupport.of(units), np.concatenate(squares), design_df)
+        squares = units.by_cell(units.tally.ww, answered=True)
+        return cls(units, UnitSupport.of(units), squares, design_df)
 
     @property
     def n_cells(self) -> int:

@@ -113,7 +113,7 @@ def _atoms(
             small += level
         return small, n_dense, _decode(np.arange(n_dense, dtype=np.intp), len(levels))
     code = np.maximum(pattern, 0).astype(np.int64)
-    if len(levels) == 1:
+    if len(levels) == 1 and n_dense <= code.size:
         code = code * 3 + levels[0]
         return code, n_dense, _decode(np.arange(n_dense, dtype=np.intp), 1)
     occurring = [np.arange(n_patterns)]

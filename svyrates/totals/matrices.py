@@ -13,7 +13,16 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
-__all__ = ["DENSE_ELEMENTS", "DENSE_SHARE", "fits", "indicator", "lighter", "scaled", "stack_rows"]
+__all__ = [
+    "DENSE_ELEMENTS",
+    "DENSE_SHARE",
+    "as_array",
+    "fits",
+    "indicator",
+    "lighter",
+    "scaled",
+    "stack_rows",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
@@ -27,6 +36,11 @@ DENSE_SHARE = 0.25
 def fits(*shape: int) -> bool:
     """Whether a matrix of this shape may be dense without a second thought."""
     return int(np.prod(shape, dtype=np.float64)) <= DENSE_ELEMENTS
+
+
+def as_array(matrix: Any) -> Any:
+    """The matrix as an array, whatever it is."""
+    return matrix.toarray() if sparse.issparse(matrix) else matrix
 
 
 def lighter(matrix: Any) -> Any:
@@ -60,5 +74,5 @@ def stack_rows(parts: Sequence[Any]) -> Any:
     size = sum(part.shape[0] for part in parts) * parts[0].shape[1]
     filled = sum(part.nnz if sparse.issparse(part) else part.size for part in parts)
     if fits(size) or filled > DENSE_SHARE * size:
-        return np.concatenate([part.toarray() if sparse.issparse(part) else part for part in parts])
+        return np.concatenate([as_array(part) for part in parts])
     return sparse.vstack([sparse.csr_array(part) for part in parts], format="csr")

@@ -12,6 +12,7 @@ Sources: Wolter (2007), chapter 6; Särndal, Swensson & Wretman (1992), chapters
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
@@ -24,7 +25,15 @@ from svyrates.design.hierarchy import Hierarchy
 from svyrates.tally import Tally
 from svyrates.totals.estimates import ZERO
 from svyrates.totals.linearized import LinearizedSpread
-from svyrates.totals.matrices import fits, indicator, lighter, scaled, stack_rows
+from svyrates.totals.matrices import (
+    DENSE_ELEMENTS,
+    as_array,
+    fits,
+    indicator,
+    lighter,
+    scaled,
+    stack_rows,
+)
 
 __all__ = ["UnitTotals", "blocks"]
 
@@ -41,7 +50,7 @@ class UnitTotals:
     ----------
     tree : Hierarchy
     tally : Tally
-    membership : (patterns, cells) sparse; who belongs where
+    membership : (patterns, cells) sparse, or an array of bool; who belongs where
     n_records : records in the sample
     """
 
@@ -50,67 +59,106 @@ class UnitTotals:
     membership: Any
     n_records: int
 
-    @cached_property
-    def _of_atom(self) -> tuple[Any, Any]:
-        """Which cells an atom counts in, and in which as a success; (atoms, outcomes × cells)."""
-        of_atom = self.membership[self.tally.pattern]
-        levels = self.tally.level.T
-        answered, success = (
-            sparse.hstack(
-                [scaled(flags.astype(np.float64), of_atom) for flags in kind], format="csr"
-            )
-            for kind in ([level < 2 for level in levels], [level == 1 for level in levels])
-        )
-        return answered, success
+    @property
+    def n_cells(self) -> int:
+        """Cells of all outcomes together."""
+        return int(self.membership.shape[1] * self.tally.level.shape[1])
+
+    def _cells(self, atom: IntArray) -> tuple[Any, Any]:
+        """Cells that each atom answers in, and succeeds in; (atoms, outcomes × cells)."""
+        of_atom = self.membership[self.tally.pattern[atom]]
+        levels = self.tally.level[atom].T
+        answered = [scaled((level < 2).astype(np.float64), of_atom) for level in levels]
+        success = [scaled((level == 1).astype(np.float64), of_atom) for level in levels]
+        if sparse.issparse(of_atom):
+            return sparse.hstack(answered, format="csr"), sparse.hstack(success, format="csr")
+        return np.hstack(answered), np.hstack(success)
+
+    def by_cell(self, of_pair: FloatArray, *, answered: bool) -> FloatArray:
+        """Sum a number of each pair by cell, over the answered records or over the others."""
+        of_atom = np.bincount(self.tally.atom, weights=of_pair, minlength=self.tally.pattern.size)
+        sums = np.zeros((self.tally.level.shape[1], self.membership.shape[1]))
+        for chunk in _chunks(of_atom.size, self.membership.shape[1]):
+            members = self.membership[self.tally.pattern[chunk]]
+            known = (self.tally.level[chunk] < 2) == answered
+            sums += np.asarray(members.T @ (of_atom[chunk, None] * known)).T
+        return sums.ravel()
 
     @cached_property
     def leaves(self) -> Any:
         """Totals `[n | y | N | Y]` of every leaf, one block of cells each."""
         tally = self.tally
-        return self._laid_out(tally.leaf, self.tree.n_leaves, tally.n, tally.w)
+        if sparse.issparse(self.membership):
+            return self._rows(tally.leaf, tally.atom, self.tree.n_leaves, tally.n, tally.w)
+        total = np.zeros((self.tree.n_leaves, 4 * self.n_cells))
+        for chunk in _chunks(tally.leaf.size, 4 * self.n_cells):
+            pairs = (tally.leaf[chunk], tally.atom[chunk])
+            total = total + self._rows(*pairs, self.tree.n_leaves, tally.n[chunk], tally.w[chunk])
+        return total
 
-    def _laid_out(self, row: IntArray, n_rows: int, n: FloatArray, w: FloatArray) -> Any:
-        """Sum the pairs into rows, shape (rows, 4 outcomes × cells)."""
-        return self._columns(row, self.tally.atom, n_rows, n, w)
-
-    def _columns(
+    def _rows(
         self, row: IntArray, atom: IntArray, n_rows: int, n: FloatArray, w: FloatArray
     ) -> Any:
-        answered, success = self._of_atom
-        dense = fits(n_rows, 4 * answered.shape[1]) and fits(*answered.shape)
-        if dense:
-            answered, success = answered.toarray(), success.toarray()
-        shape = (n_rows, answered.shape[0])
-        counts, weights = indicator(row, atom, n, shape), indicator(row, atom, w, shape)
-        if not dense:
-            counts, weights = sparse.csr_array(counts), sparse.csr_array(weights)
+        """Sum pairs into rows, shape (rows, 4 cells), columns `[n | y | N | Y]`."""
+        atoms, position = np.unique(atom, return_inverse=True)
+        answered, success = self._cells(atoms)
+        shape = (n_rows, atoms.size)
+        counts, weights = indicator(row, position, n, shape), indicator(row, position, w, shape)
+        if not sparse.issparse(answered) or (
+            fits(n_rows, 4 * self.n_cells) and fits(*answered.shape)
+        ):
+            answered, success = as_array(answered), as_array(success)
+            parts = [counts @ answered, counts @ success, weights @ answered, weights @ success]
+            return np.hstack(parts)
+        counts, weights = sparse.csr_array(counts), sparse.csr_array(weights)
         parts = [counts @ answered, counts @ success, weights @ answered, weights @ success]
-        return np.hstack(parts) if dense else sparse.hstack(parts, format="csr")
+        return sparse.hstack(parts, format="csr")
 
-    def _moments(
-        self, atom: IntArray, n: FloatArray, w: FloatArray, ww: FloatArray
-    ) -> tuple[Any, IntArray]:
-        """Two rows for each set of records of one atom that hold its second moments.
+    def _moments(self, pairs: Any, group: IntArray) -> tuple[Any, IntArray]:
+        """Rows whose squares are the second moments of the records of each group of pairs.
+
+        Parameters
+        ----------
+        pairs : tuple of atom, n, Σw and Σw², each (pairs,)
+        group : (pairs,)
 
         Returns
         -------
         rows : (rows, k)
-        of_set : (rows,) the set that each row belongs to
+        of_group : (rows,) the group that each row belongs to
         """
+        k = 4 * self.n_cells
+        if not group.size or sparse.issparse(self.membership) or fits(group.size, k):
+            return self._moment_rows(pairs, group)
+        # Many patterns of overlapping masks: keep of each group's rows a triangle with the same
+        # squares (QR decomposition), at most k rows.
+        order = np.argsort(group, kind="stable")
+        found, of_group = [], []
+        for members in np.split(order, np.flatnonzero(np.diff(group[order])) + 1):
+            triangle = np.empty((0, k))
+            for chunk in _chunks(members.size, k):
+                few = members[chunk]
+                rows, _ = self._moment_rows(tuple(part[few] for part in pairs), few)
+                both = np.concatenate((triangle, as_array(rows)))
+                triangle = np.asarray(np.linalg.qr(both, mode="r"))
+            found.append(triangle)
+            of_group.append(np.full(triangle.shape[0], group[members[0]]))
+        return np.concatenate(found), np.concatenate(of_group)
+
+    def _moment_rows(self, pairs: Any, group: IntArray) -> tuple[Any, IntArray]:
+        """`(√n, Σw/√n)` and `(0, √(Σw² - (Σw)²/n))` of every pair, laid out by cell."""
+        atom, n, w, ww = pairs
         root = np.sqrt(n)
         rest = np.maximum(ww - w**2 / n, 0.0)
         # Equal weights leave rounding noise here, not spread.
         uneven = np.flatnonzero(rest > ZERO * ww)
-        sets = np.arange(n.size)
-        first = self._columns(sets, atom, n.size, root, w / root)
-        second = self._columns(
-            np.arange(uneven.size),
-            atom[uneven],
-            uneven.size,
-            np.zeros(uneven.size),
-            np.sqrt(rest[uneven]),
-        )
-        return stack_rows([first, second]), np.concatenate((sets, uneven))
+        first = self._rows(np.arange(n.size), atom, n.size, root, w / root)
+        if not uneven.size:
+            return first, group
+        nothing = np.zeros(uneven.size)
+        rows = np.arange(uneven.size)
+        second = self._rows(rows, atom[uneven], uneven.size, nothing, np.sqrt(rest[uneven]))
+        return stack_rows([first, second]), np.concatenate((group, group[uneven]))
 
     @cached_property
     def totals(self) -> FloatArray:
@@ -150,7 +198,8 @@ class UnitTotals:
                 for part in (tally.n, tally.w, tally.ww)
             )
             atom = np.flatnonzero(n)
-            rows.append(self._moments(atom, n[atom], w[atom], ww[atom])[0])
+            pairs = (atom, n[atom], w[atom], ww[atom])
+            rows.append(self._moments(pairs, np.zeros_like(atom))[0])
         rows.append(self.totals[None, :] / np.sqrt(n_units))
         matrix = stack_rows(rows)
         weight = np.full(matrix.shape[0], n_units / max(n_units - 1, 1))
@@ -204,14 +253,14 @@ class UnitTotals:
             parts.append((scaled(1.0 / np.sqrt(m), sums), -scale, stratum))
             return parts
         # Centred first, squares lose no digits.
-        means = scaled(1.0 / m, sums.toarray() if sparse.issparse(sums) else sums)
+        means = scaled(1.0 / m, as_array(sums))
         parts.append(((rows - means[parent])[usual], *of_unit))
         return parts
 
     def _about_all_units(self, rows: Any, stratum: IntArray) -> Part:
         """Lone units about the mean over all first-stage units: `(1 - f)(z - z̄)²`."""
         mean = self.totals / self.tree.n_children[0].sum()
-        rows = rows.toarray() if sparse.issparse(rows) else rows
+        rows = as_array(rows)
         return rows - mean, 1.0 - self.tree.fraction[0][stratum], stratum
 
     def _records_inside(self, depth: int) -> list[Part]:
@@ -228,9 +277,8 @@ class UnitTotals:
             )
             pools = pools[~lone]
         mine = np.isin(tally.leaf, pools)
-        leaf = tally.leaf[mine]
-        rows, of_set = self._moments(tally.atom[mine], tally.n[mine], tally.w[mine], tally.ww[mine])
-        node = tree.leaf_node[leaf[of_set]]
+        pairs = (tally.atom[mine], tally.n[mine], tally.w[mine], tally.ww[mine])
+        rows, node = self._moments(pairs, tree.leaf_node[tally.leaf[mine]])
         parts.append((rows, scale[node], stratum[node]))
         nodes = tree.leaf_node[pools]
         m = tree.n_children[depth][nodes].astype(np.float64)
@@ -242,6 +290,13 @@ def blocks(totals: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, Floa
     """Split `[n | y | N | Y]` along the last axis."""
     n, y, weighted_n, weighted_y = np.split(totals, 4, axis=-1)
     return n, y, weighted_n, weighted_y
+
+
+def _chunks(n_rows: int, n_columns: int) -> Iterator[slice]:
+    """Cut rows into pieces whose dense matrix is of moderate size."""
+    step = max(4 * DENSE_ELEMENTS // n_columns, 1)
+    for start in range(0, n_rows, step):
+        yield slice(start, min(start + step, n_rows))
 
 
 def _gathered(target: IntArray, n_targets: int, chosen: IntArray, rows: Any) -> Any:
