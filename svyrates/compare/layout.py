@@ -41,7 +41,7 @@ def comparison_layout(table: ComparisonTable, *, percent: bool, every_column: bo
         frame = table.to_frame()
         known = {column.name for column in keys}
         columns = [machine_column(frame, str(name)) for name in frame if name not in known]
-        return Table("Comparisons", (*keys, *columns))
+        return Table(_title(table), (*keys, *columns), tuple(_about(table)))
     marks, remarks = footnotes(tuple(table.note))
     show_rate: Callable[[Any], str] = in_percent if percent else lambda value: fixed(value, 4)
     show: Callable[[Any], str] = (

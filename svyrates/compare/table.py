@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
-from os import PathLike
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -16,7 +14,7 @@ from svyrates.compare.layout import comparison_layout
 from svyrates.compare.pairs import PairBlock
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.table import RateTable
-from svyrates.words import Table
+from svyrates.words import Table, Tabular
 
 __all__ = ["ComparisonTable"]
 
@@ -30,7 +28,7 @@ _NUMBERS = (
 
 
 @dataclass(frozen=True, repr=False)
-class ComparisonTable:
+class ComparisonTable(Tabular):
     """Comparisons of rates, one row per pair; all arrays have shape (pairs,).
 
     Attributes
@@ -259,27 +257,9 @@ class ComparisonTable:
 
         return variance_sources(self)
 
-    def to_csv(self, path: str | PathLike[str] | None = None) -> str | None:
-        """Write `to_frame` as CSV; without a path return the text."""
-        text = self.table(every_column=True).csv()
-        if path is None:
-            return text
-        Path(path).write_text(text, encoding="utf-8", newline="")
-        return None
-
     def table(self, *, percent: bool = False, every_column: bool = False) -> Table:
         """The table laid out for reading."""
         return comparison_layout(self, percent=percent, every_column=every_column)
-
-    def text(self, width: int = 80, *, percent: bool = False) -> str:
-        """Plain text, at most `width` columns wide."""
-        return self.table(percent=percent).text(width)
-
-    def __repr__(self) -> str:
-        return self.text()
-
-    def _repr_html_(self) -> str:
-        return self.table().html()
 
     def __eq__(self, other: object) -> bool:
         if not isinstance(other, ComparisonTable):

@@ -184,7 +184,7 @@ class SampleDesign:
         return self.summary().text()
 
     def _repr_html_(self) -> str:
-        return self.summary().html()
+        return self.summary().to_html()
 
 
 def _names(given: str | Sequence[str] | None) -> tuple[str, ...]:

@@ -11,13 +11,13 @@ from numpy.typing import NDArray
 
 from svyrates.design.hierarchy import Hierarchy
 from svyrates.design.lone import LonePolicy
-from svyrates.words import Column, Table, count, fixed, plural
+from svyrates.words import Column, Table, Tabular, count, fixed, plural
 
 __all__ = ["DesignSummary"]
 
 
-@dataclass(frozen=True, slots=True)
-class DesignSummary:
+@dataclass(frozen=True, repr=False)
+class DesignSummary(Tabular):
     """What a design found in its columns; prints as a small table.
 
     Attributes
@@ -84,25 +84,11 @@ class DesignSummary:
             remarks.append("The weights sum to the sample size, so population sizes are unknown.")
         return cls(tuple(facts), tuple(remarks))
 
-    def table(self) -> Table:
+    def table(self, *, percent: bool = False, every_column: bool = False) -> Table:  # noqa: ARG002
         """The facts as a two-column table."""
         names = Column("item", "", [name for name, _ in self.facts], key=True)
         values = Column("value", "", [value for _, value in self.facts])
         return Table("Sample design", (names, values), self.remarks)
-
-    def text(self, width: int = 80) -> str:
-        """Plain text, at most `width` columns wide."""
-        return self.table().text(width)
-
-    def html(self) -> str:
-        """An HTML fragment."""
-        return self.table().html()
-
-    def __str__(self) -> str:
-        return self.text()
-
-    def _repr_html_(self) -> str:
-        return self.html()
 
 
 def _kish(weights: NDArray[np.float64], positive: int) -> float:

@@ -45,7 +45,7 @@ def rate_layout(rates: RateTable, *, percent: bool, every_column: bool) -> Table
         frame = rates.to_frame()
         columns = [column for column in columns if names]
         columns += [machine_column(frame, str(name)) for name in frame if name not in names]
-        return Table("Rates", tuple(columns))
+        return Table(_title(rates), tuple(columns), tuple(_about(rates)))
     columns += [
         _numbers("n", "n", rates.n, count),
         _numbers("n_missing", "no answer", rates.n_missing, count),

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from os import PathLike
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -14,7 +12,7 @@ from numpy.typing import NDArray
 from svyrates.errors import ComparisonError
 from svyrates.rates.layout import rate_layout
 from svyrates.rates.source import CrudeRates
-from svyrates.words import Table
+from svyrates.words import Table, Tabular
 
 __all__ = ["Coverage", "RateBlock", "RateTable"]
 
@@ -50,7 +48,7 @@ class RateBlock:
 
 
 @dataclass(frozen=True, repr=False)
-class RateTable:
+class RateTable(Tabular):
     """Rates of one or several outcomes in one or several groups.
 
     One row per outcome and group, outcomes slowest. All arrays have shape (rows,); all rates are
@@ -211,31 +209,9 @@ class RateTable:
         data["note"] = list(self.notes)
         return pd.DataFrame(data)
 
-    def to_csv(self, path: str | PathLike[str] | None = None) -> str | None:
-        """Write `to_frame` as CSV; without a path return the text.
-
-        Numbers keep all their digits; text that a spreadsheet would take for a formula is
-        defused with an apostrophe.
-        """
-        text = self.table(every_column=True).csv()
-        if path is None:
-            return text
-        Path(path).write_text(text, encoding="utf-8", newline="")
-        return None
-
     def table(self, *, percent: bool = False, every_column: bool = False) -> Table:
         """The table laid out for reading."""
         return rate_layout(self, percent=percent, every_column=every_column)
-
-    def text(self, width: int = 80, *, percent: bool = False) -> str:
-        """Plain text, at most `width` columns wide."""
-        return self.table(percent=percent).text(width)
-
-    def __repr__(self) -> str:
-        return self.text()
-
-    def _repr_html_(self) -> str:
-        return self.table().html()
 
     def __eq__(self, other: object) -> bool:
         if not isinstance(other, RateTable):

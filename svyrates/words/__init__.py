@@ -4,10 +4,12 @@ from svyrates.words.escape import display_width, for_html, for_terminal, shorten
 from svyrates.words.numbers import count, fixed, p_value, percent, points, significant
 from svyrates.words.sentences import join_words, plural
 from svyrates.words.table import Column, Table
+from svyrates.words.tabular import Tabular
 
 __all__ = [
     "Column",
     "Table",
+    "Tabular",
     "count",
     "display_width",
     "fixed",

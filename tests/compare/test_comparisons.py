@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import warnings
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -381,8 +382,27 @@ def test_tables_fit_and_keep_every_digit(rates: sr.RateTable) -> None:
     for table in (rates, gaps):
         for width in (60, 80, 120, 200):
             assert max(map(len, table.text(width).splitlines())) <= width
-        text = table.to_csv()
-        assert text is not None
     frame = gaps.to_frame()
-    assert repr(float(frame["difference"][0])) in (gaps.to_csv() or "")
+    assert repr(float(frame["difference"][0])) in gaps.to_csv()
     assert "points" in gaps.text(percent=True)
+
+
+def test_every_format_to_text_and_to_file(rates: sr.RateTable, tmp_path: Path) -> None:
+    for table in (rates, _quietly(rates)):
+        for kind in ("csv", "json", "html", "markdown", "latex"):
+            write = getattr(table, f"to_{kind}")
+            text = write()
+            assert write(tmp_path / "file") == text
+            assert (tmp_path / "file").read_text(encoding="utf-8") == text
+            assert "social tenant" in text
+
+
+def test_percentage_points_are_never_percent(rates: sr.RateTable) -> None:
+    gaps = _quietly(rates)
+    header = gaps.to_markdown(percent=True).splitlines()[2]
+    assert "difference (points)" in header
+    row = gaps.to_markdown(percent=True).splitlines()[4].split(" | ")
+    assert row[2].endswith("%")
+    assert not row[4].endswith("%")
+    ratio = _quietly(rates, measure="ratio").to_markdown(percent=True)
+    assert "points" not in ratio
