@@ -72,6 +72,14 @@ def blocks_of(text: str) -> list[Block]:
 def run_document(text: str, name: str) -> None:
     """Run every block of a document in the current folder; fail where it shows something else."""
     namespace: dict[str, Any] = {"__name__": "__main__"}
+    with warnings.catch_warnings():
+        # A filter that a block sets holds for those below it, as it does for the reader.
+        warnings.simplefilter("error")
+        warnings.simplefilter("always", RatesWarning)
+        _run_blocks(text, name, namespace)
+
+
+def _run_blocks(text: str, name: str, namespace: dict[str, Any]) -> None:
     for block in blocks_of(text):
         where = f"{name}:{block.line}"
         if block.language == "python":
@@ -98,9 +106,7 @@ def _run_python(block: Block, name: str, namespace: dict[str, Any]) -> tuple[str
     printed = io.StringIO()
     # Blank lines above make a traceback name the line of the document.
     code = compile("\n" * (block.line - 1) + block.body, name, "exec")
-    with warnings.catch_warnings(), contextlib.redirect_stdout(printed):
-        warnings.simplefilter("error")
-        warnings.simplefilter("always", RatesWarning)
+    with contextlib.redirect_stdout(printed):
         warnings.showwarning = show
         exec(code, namespace)  # noqa: S102 - the document is ours
     return printed.getvalue(), warned
