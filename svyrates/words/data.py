@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import io
 import json
 import math
 from collections.abc import Sequence
@@ -32,12 +30,21 @@ def plain(value: Any) -> Any:
 
 def csv_table(columns: Sequence[Column]) -> str:
     """Rows of raw values; infinities are written `inf` and missing values left empty."""
-    file = io.StringIO()
-    writer = csv.writer(file, lineterminator="\n")
-    writer.writerow([for_csv(column.name) for column in columns])
-    for row in zip(*(column.values for column in columns), strict=True):
-        writer.writerow([_csv_cell(value) for value in row])
-    return file.getvalue()
+    rows = zip(*(column.values for column in columns), strict=True)
+    lines = [_csv_line([for_csv(column.name) for column in columns])]
+    lines += [_csv_line([_csv_cell(value) for value in row]) for row in rows]
+    return "".join(lines)
+
+
+def _csv_line(cells: Sequence[str]) -> str:
+    # The writer of the standard library left a lone carriage return unquoted before Python 3.13,
+    # and its own reader then took the rest of the cell for another row.
+    quoted = [
+        '"' + cell.replace('"', '""') + '"' if any(each in cell for each in ',"\r\n') else cell
+        for cell in cells
+    ]
+    # A line with nothing on it would be no row.
+    return (",".join(quoted) or '""') + "\n"
 
 
 def _csv_cell(value: Any) -> str:

@@ -25,7 +25,8 @@ _LATEX = {
     "<": r"\textless{}", ">": r"\textgreater{}", "|": r"\textbar{}",
     "–": "--", "≥": r"$\geq$", "−": "$-$", "∞": r"$\infty$", "×": r"$\times$", "√": r"$\surd$",
 }  # fmt: skip
-_FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
+# The full-width signs are formulas too where spreadsheets are set to East Asian languages.
+_FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n", "＝", "＋", "－", "＠")
 
 
 def _visible(character: str) -> str:

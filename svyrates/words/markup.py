@@ -26,7 +26,9 @@ _STYLE = (
     ".rates-table tbody th{font-weight:500}"
     ".rates-table tbody tr+tr>*{border-top:1px solid rgba(127,127,127,.25)}"
     ".rates-table tbody tr:last-child>*{border-bottom:1.5px solid currentColor}"
-    ".rates-table .rates-number{text-align:right;white-space:nowrap}"
+    ".rates-table .rates-number{text-align:right}"
+    ".rates-table td.rates-number{white-space:nowrap}"
+    ".rates-frame{overflow-x:auto}"
     ".rates-notes{font-size:.85em;opacity:.85;margin:.2em 0;max-width:46em}"
     "</style>"
 )
@@ -34,12 +36,14 @@ _STYLE = (
 
 def html_table(title: str, columns: Sequence[Column], notes: Sequence[str]) -> str:
     """A table with a caption, scoped headers and paragraphs of notes."""
-    lines = [_STYLE, '<table class="rates-table">', f"<caption>{for_html(title)}</caption>"]
-    lines.append("<thead><tr>")
-    lines += [
-        f'<th scope="col"{_class(column)}>{for_html(column.heading)}</th>' for column in columns
-    ]
-    lines.append("</tr></thead>")
+    lines = [_STYLE, '<div class="rates-frame"><table class="rates-table">']
+    lines.append(f"<caption>{for_html(title)}</caption>")
+    if any(column.heading for column in columns):
+        lines.append("<thead><tr>")
+        lines += [
+            f'<th scope="col"{_class(column)}>{for_html(column.heading)}</th>' for column in columns
+        ]
+        lines.append("</tr></thead>")
     lines.append("<tbody>")
     for row in zip(*(column.shown() for column in columns), strict=True):
         lines.append("<tr>")
@@ -47,7 +51,7 @@ def html_table(title: str, columns: Sequence[Column], notes: Sequence[str]) -> s
             tag, scope = ("th", ' scope="row"') if column.key else ("td", "")
             lines.append(f"<{tag}{scope}{_class(column)}>{for_html(cell)}</{tag}>")
         lines.append("</tr>")
-    lines.append("</tbody></table>")
+    lines.append("</tbody></table></div>")
     lines += [f'<p class="rates-notes">{for_html(note)}</p>' for note in notes]
     return "\n".join(lines)
 
@@ -87,4 +91,6 @@ def latex_table(title: str, columns: Sequence[Column], notes: Sequence[str]) -> 
 
 
 def _row(cells: Sequence[str]) -> str:
-    return f"{' & '.join(cells)} \\\\"
+    line = " & ".join(cells)
+    # After the end of a row, LaTeX takes a bracket or a star for an argument of that end.
+    return f"{'{}' if line.startswith(('[', '*')) else ''}{line} \\\\"

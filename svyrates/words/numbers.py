@@ -8,7 +8,7 @@ happens only here, on display; data keep every digit.
 from __future__ import annotations
 
 import math
-from decimal import ROUND_HALF_UP, Decimal
+from decimal import ROUND_HALF_UP, Context, Decimal
 from typing import Any
 
 __all__ = [
@@ -24,6 +24,8 @@ __all__ = [
 
 MISSING = "–"
 _SMALLEST_P = 0.0001
+# Room for every digit that a float can have before the point, and then some after it.
+_EXACT = Context(prec=800, rounding=ROUND_HALF_UP)
 
 
 def is_missing(value: Any) -> bool:
@@ -47,7 +49,7 @@ def _unusual(value: Any) -> str | None:
 
 def _rounded(value: Any, digits: int, *, times: int = 1) -> Decimal:
     exact = Decimal(repr(float(value))) * times
-    rounded = exact.quantize(Decimal(1).scaleb(-digits), rounding=ROUND_HALF_UP)
+    rounded = exact.quantize(Decimal(1).scaleb(-digits), context=_EXACT)
     return abs(rounded) if rounded == 0 else rounded
 
 
@@ -57,7 +59,7 @@ def fixed(value: Any, digits: int) -> str:
 
 
 def significant(value: Any, digits: int) -> str:
-    """At most this many significant digits, without an exponent or idle zeros."""
+    """So many significant digits, without an exponent or idle zeros; whole parts stay whole."""
     unusual = _unusual(value)
     if unusual is not None:
         return unusual

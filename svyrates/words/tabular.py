@@ -62,5 +62,6 @@ class Tabular(ABC):
 
 def _kept(text: str, path: str | PathLike[str] | None) -> str:
     if path is not None:
-        Path(path).write_text(text, encoding="utf-8", newline="")
+        # Half of a surrogate pair has no bytes of its own; it is written as its escape.
+        Path(path).write_text(text, encoding="utf-8", errors="backslashreplace", newline="")
     return text

@@ -51,8 +51,13 @@ def wrap(text: str, width: int, indent: str = "") -> list[str]:
 
 
 def _fitting(text: str, width: int) -> str:
-    head = shorten(text, width + 1)[:-1]
-    return head or text[:1]
+    """Longest start of a text that fits; marks stay with the letter that carries them."""
+    used = 0
+    for at, character in enumerate(text):
+        used += display_width(character)
+        if used > width:
+            return text[: max(at, 1)]
+    return text
 
 
 def _widths(
@@ -79,6 +84,15 @@ def _widths(
             break
         needed[max(giving, key=needed.__getitem__)] -= 1
     return needed
+
+
+def _squeezed(columns: Sequence[Column], widths: dict[int, int], width: int) -> dict[int, int]:
+    """Widths below what is comfortable: words break before any number is cut."""
+    sizes = dict(widths)
+    while _total(sizes.values()) > width and max(sizes.values()) > 1:
+        words = [i for i in sizes if columns[i].kind == "text" and sizes[i] > _LEAST_TEXT]
+        sizes[max(words or sizes, key=sizes.__getitem__)] -= 1
+    return sizes
 
 
 def _longest_word(texts: Sequence[str]) -> int:
@@ -122,8 +136,7 @@ def _panel(
 ) -> list[str]:
     widths = _widths(columns, headings, cells, panel, width)
     if _total(widths.values()) > width:
-        share = max((width + _GAP) // len(panel) - _GAP, 1)
-        widths = {index: min(size, share) for index, size in widths.items()}
+        widths = _squeezed(columns, widths, width)
     heads = {index: wrap(headings[index], widths[index]) for index in panel}
     height = max(len(head) for head in heads.values())
     lines = []
@@ -158,7 +171,7 @@ def _cell(column: Column, text: str, width: int) -> list[str]:
     """Text cells wrap over at most a few lines; numbers stay whole or are cut with an ellipsis."""
     if display_width(text) <= width or column.kind == "number":
         return [shorten(text, width)]
-    lines = wrap(text, width)
+    lines = wrap(text, width) or [""]
     if len(lines) <= _MOST_LINES:
         return lines
     return [*lines[: _MOST_LINES - 1], shorten(" ".join(lines[_MOST_LINES - 1 :]), width)]
