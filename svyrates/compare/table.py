@@ -14,7 +14,7 @@ from svyrates.compare.layout import comparison_layout
 from svyrates.compare.pairs import PairBlock
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.table import RateTable
-from svyrates.words import Table, Tabular
+from svyrates.words import Table, Tabular, for_terminal
 
 __all__ = ["ComparisonTable"]
 
@@ -188,7 +188,7 @@ class ComparisonTable(Tabular):
     def _fits(self, row: int, group: object, versus: object) -> bool:
         one, other = self.group[row], self.versus[row]
         if versus is None:
-            return group is None or _is(one, group)
+            return group is None or _is(one, group) or _is(other, group)
         return ((group is None or _is(one, group)) and _is(other, versus)) or (
             _is(one, versus) and _is(other, group)
         )
@@ -240,7 +240,8 @@ class ComparisonTable(Tabular):
             f"{self.held[position]} {self.levels[row][position]}" for position in self._shown()
         )
         title = f"{self.group[row]} versus {self.versus[row]}"
-        return f"{title} ({level})" if level else title
+        # It goes into sentences and warnings, which a terminal prints as they are.
+        return for_terminal(f"{title} ({level})" if level else title)
 
     def variance_sources(self) -> pd.DataFrame:
         """Why the two variances differ: ratios whose product is `variance_ratio`.
