@@ -12,7 +12,13 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from svyrates.compare import EVERYONE, EVERYONE_ELSE, ComparisonTable, compare_rates
     from svyrates.demo import demo_survey
-    from svyrates.design import DesignSummary, SampleDesign
+    from svyrates.design import (
+        DesignSummary,
+        ReplicateWeights,
+        SampleDesign,
+        make_replicates,
+        merge_replicates,
+    )
     from svyrates.errors import (
         ComparisonError,
         DataFileError,
@@ -40,17 +46,26 @@ __all__ = [
     "RateTable",
     "RatesError",
     "RatesWarning",
+    "ReplicateWeights",
     "SampleDesign",
     "SimpleFormulaWarning",
     "compare_rates",
     "demo_survey",
     "estimate_rates",
+    "make_replicates",
+    "merge_replicates",
 ]
 
 _HOMES = {
     "svyrates.compare": ("EVERYONE", "EVERYONE_ELSE", "ComparisonTable", "compare_rates"),
     "svyrates.demo": ("demo_survey",),
-    "svyrates.design": ("DesignSummary", "SampleDesign"),
+    "svyrates.design": (
+        "DesignSummary",
+        "ReplicateWeights",
+        "SampleDesign",
+        "make_replicates",
+        "merge_replicates",
+    ),
     "svyrates.errors": (
         "ComparisonError",
         "DataFileError",

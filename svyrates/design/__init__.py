@@ -1,6 +1,15 @@
 """What the survey is: weights, strata, stages, and the checks on them."""
 
+from svyrates.design.make_replicates import make_replicates
+from svyrates.design.merge import merge_replicates
+from svyrates.design.replicates import ReplicateWeights
 from svyrates.design.sample_design import SampleDesign
 from svyrates.design.summary import DesignSummary
 
-__all__ = ["DesignSummary", "SampleDesign"]
+__all__ = [
+    "DesignSummary",
+    "ReplicateWeights",
+    "SampleDesign",
+    "make_replicates",
+    "merge_replicates",
+]

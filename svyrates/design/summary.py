@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 from svyrates.design.hierarchy import Hierarchy
 from svyrates.design.lone import LonePolicy
-from svyrates.words import Column, Table, Tabular, count, fixed, plural
+from svyrates.design.replicates import ReplicateSet
+from svyrates.words import Column, Table, Tabular, count, fixed, plural, significant
 
 __all__ = ["DesignSummary"]
 
@@ -47,6 +48,7 @@ class DesignSummary(Tabular):
         tree: Hierarchy,
         lone: LonePolicy | None,
         repeated: bool,
+        replicates: ReplicateSet | None,
     ) -> DesignSummary:
         """Collect the facts of a checked design."""
         total = float(weights.sum())
@@ -61,21 +63,29 @@ class DesignSummary(Tabular):
             ("weight", columns["weight"] or "none: every record has weight 1"),
             ("sum of weights", count(total) + (" (relative weights)" if relative else "")),
             ("unequal-weighting factor (Kish)", fixed(_kish(weights, positive), 2)),
-            ("strata", _strata(columns["strata"], tree.n_strata)),
-            ("first-stage units", f"{count(units)} ({_unit_name(columns, tree)})"),
-            ("units per stratum: least / median / most", spread),
-            ("stages in the variance", _stages(tree)),
-            ("degrees of freedom", count(units - tree.n_strata)),
         ]
+        if replicates is None or columns["strata"] or columns["clusters"]:
+            facts += [
+                ("strata", _strata(columns["strata"], tree.n_strata)),
+                ("first-stage units", f"{count(units)} ({_unit_name(columns, tree)})"),
+                ("units per stratum: least / median / most", spread),
+            ]
+        if replicates is None:
+            facts += [
+                ("stages in the variance", _stages(tree)),
+                ("degrees of freedom", count(units - tree.n_strata)),
+            ]
+        else:
+            facts += _replicated(replicates)
         remarks = []
-        if repeated:
+        if repeated and replicates is None:
             remarks.append("Unit codes repeat across strata; they are read within strata.")
         if lone is not None:
             listed = plural(len(lone.strata), "stratum", "strata")
             remarks.append(f"{listed} with a single sampling unit: {lone.done}.")
         deeper = [tree.n_children[level] for level in range(1, len(tree.n_children))]
         alone = sum(int(np.count_nonzero(children == 1)) for children in deeper)
-        if alone:
+        if alone and replicates is None:
             remarks.append(
                 f"{plural(alone, 'unit')} of a later stage drawn alone: no variance is counted "
                 "inside them."
@@ -89,6 +99,28 @@ class DesignSummary(Tabular):
         names = Column("item", "", [name for name, _ in self.facts], key=True)
         values = Column("value", "", [value for _, value in self.facts])
         return Table("Sample design", (names, values), self.remarks)
+
+
+def _replicated(replicates: ReplicateSet) -> list[tuple[str, str]]:
+    """Scheme, coefficients and centring, always shown: a wrong one is the commonest mistake."""
+    c = replicates.coefficients
+    shown = significant(c[0], 6)
+    if np.ptp(c) > 0:
+        shown = f"{significant(c.min(), 6)} to {significant(c.max(), 6)}"
+    centre = "the replicate mean" if replicates.centre_on_mean else "the full-sample estimate"
+    facts = [
+        (
+            "replicates",
+            f"{count(replicates.count)} ({replicates.names[0]} … {replicates.names[-1]})",
+        ),
+        ("scheme", replicates.scheme),
+        ("variance", f"Σ c (replicate − centre)², c = {shown}"),
+        ("centre", centre),
+        ("degrees of freedom", significant(replicates.df, 6)),
+    ]
+    if replicates.n_negative:
+        facts.append(("negative replicate weights", f"{count(replicates.n_negative)}, kept"))
+    return facts
 
 
 def _kish(weights: NDArray[np.float64], positive: int) -> float:
