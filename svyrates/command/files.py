@@ -6,21 +6,17 @@ import csv
 import difflib
 import gzip
 import io
-import sys
 import zipfile
 import zlib
-from collections.abc import Iterable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import AbstractContextManager, contextmanager
 from pathlib import Path
-from typing import IO, TYPE_CHECKING, Any, cast
+from typing import IO, Any, cast
 
 import pandas as pd
 
 from svyrates.errors import DataFileError, some
-from svyrates.words import Table
-
-if TYPE_CHECKING:
-    from rich.progress import Progress
+from svyrates.words import Table, progress_bar
 
 __all__ = ["read_columns", "write_table"]
 
@@ -159,7 +155,7 @@ def _read_parquet(path: Path, wanted: list[str]) -> pd.DataFrame:
         ) from problem
     try:
         _check_columns(path, wanted, pq.read_schema(path).names)
-        with _spinner(path):
+        with _sign_of_life(path):
             return cast("pd.DataFrame", pq.read_table(path, columns=wanted).to_pandas())
     except (pa.ArrowException, OSError) as problem:
         raise DataFileError(
@@ -169,7 +165,7 @@ def _read_parquet(path: Path, wanted: list[str]) -> pd.DataFrame:
 
 def _read_xport(path: Path, wanted: list[str], encoding: str) -> pd.DataFrame:
     try:
-        with _spinner(path):
+        with _sign_of_life(path):
             frame = pd.read_sas(path, format="xport", encoding=encoding)
     except UnicodeError as problem:
         raise DataFileError(
@@ -197,29 +193,46 @@ def _read_xport(path: Path, wanted: list[str], encoding: str) -> pd.DataFrame:
 @contextmanager
 def _watched(path: Path) -> Iterator[IO[bytes] | Path]:
     """The file, with a progress bar on the terminal if it is large."""
-    if path.stat().st_size < _WORTH_PROGRESS or not sys.stderr.isatty():
-        yield path
-        return
-    with _bar() as bar, bar.open(path, "rb", description=f"Reading {path.name}") as file:
-        yield io.BufferedReader(cast("io.RawIOBase", file))
+    size = path.stat().st_size
+    with progress_bar(f"Reading {path.name}", size, worth=size > _WORTH_PROGRESS) as progress:
+        if size <= _WORTH_PROGRESS:
+            yield path
+            return
+        with path.open("rb") as file:
+            yield cast("IO[bytes]", _Counted(file, progress))
 
 
-@contextmanager
-def _spinner(path: Path) -> Iterator[None]:
-    """A sign of life on the terminal while a large file is read in one piece."""
-    if path.stat().st_size < _WORTH_PROGRESS or not sys.stderr.isatty():
-        yield
-        return
-    with _bar() as bar:
-        bar.add_task(f"Reading {path.name}", total=None)
-        yield
+def _sign_of_life(path: Path) -> AbstractContextManager[object]:
+    """A bar without steps for a large file that is read in one piece."""
+    worth = path.stat().st_size > _WORTH_PROGRESS
+    return progress_bar(f"Reading {path.name}", 1, worth=worth)
 
 
-def _bar() -> Progress:
-    from rich.console import Console
-    from rich.progress import Progress
+class _Counted(io.BufferedIOBase):
+    """A binary file that tells how far it has been read."""
 
-    return Progress(console=Console(stderr=True), transient=True)
+    def __init__(self, file: IO[bytes], progress: Callable[[int], None]) -> None:
+        self._file, self._progress = file, progress
+
+    def readable(self) -> bool:
+        return True
+
+    def read(self, size: int | None = -1) -> bytes:
+        content = self._file.read(-1 if size is None else size)
+        self._progress(len(content))
+        return content
+
+    def read1(self, size: int = -1) -> bytes:
+        return self.read(size)
+
+    def seekable(self) -> bool:
+        return True
+
+    def seek(self, offset: int, whence: int = 0) -> int:
+        return self._file.seek(offset, whence)
+
+    def tell(self) -> int:
+        return self._file.tell()
 
 
 def write_table(path: Path, table: Table) -> None:

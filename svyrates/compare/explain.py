@@ -165,8 +165,11 @@ def _why(table: ComparisonTable, row: int, steps: FloatArray) -> str:
     ratio = table.variance_ratio[row]
     sentences = []
     if np.isfinite(ratio) and ratio > 0:
+        names = dict(_STEP_NAMES)
+        if np.isnan(steps[-1]):
+            names["clusters"] = "clustering and stratification"
         listed = [
-            f"{_STEP_NAMES[step]} × {fixed(value, 2)}"
+            f"{names[step]} × {fixed(value, 2)}"
             for step, value in zip(STEPS, steps, strict=True)
             if np.isfinite(value) and abs(value - 1.0) >= 0.005
         ]

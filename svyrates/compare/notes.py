@@ -28,6 +28,7 @@ def comparison_notes(
     certain = joint.certain.any(axis=0)
     empty = (joint.n == 0).any(axis=0)
     one_unit = joint.undefined.any(axis=0) & ~empty
+    gaps = one_unit & np.isnan(joint.cov[[0, 1], [0, 1]]).any(axis=0)
     no_df = ~(df > 0) & ~empty & ~one_unit
     rates = joint.values[:2]
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -44,7 +45,8 @@ def comparison_notes(
     one_each = "one sampling unit with members in each stratum"
     conditions = [
         (empty, "too little sample for this test: a group is empty"),
-        (one_unit, "too little sample for this test: a group sits in one sampling unit"),
+        (one_unit & ~gaps, "too little sample for this test: a group sits in one sampling unit"),
+        (gaps, "too little sample for this test: a rate is undefined in too many replicates"),
         (
             no_df,
             f"too little sample for this test: no degrees of freedom, {one_each}",

@@ -95,7 +95,8 @@ def read_joint(block: PairBlock, fixed: float | None, df: str | float) -> Joint:
     )
     side_df = freedom_of(found, block.source, df)
     no_spread = (covariance.diagonal()[:m] == 0.0) & (found.units < 2) & ~found.certain
-    undefined = (found.n == 0) | no_spread
+    gaps = np.isnan(covariance.diagonal()[:m]) & ~found.certain
+    undefined = (found.n == 0) | no_spread | gaps
 
     def both(of_side: FloatArray, otherwise: float) -> FloatArray:
         return np.stack((of_side[plus], np.where(real, of_side[there], otherwise)))

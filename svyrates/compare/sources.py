@@ -33,11 +33,20 @@ def variance_sources(table: ComparisonTable) -> pd.DataFrame:
 
 
 def step_ratios(table: ComparisonTable) -> FloatArray:
-    """Successive variance ratios, shape (4, pairs), whose product is `variance_ratio`."""
+    """Successive variance ratios, shape (4, pairs), whose product is `variance_ratio`.
+
+    With replicates the last is NaN: what they know of strata is in the step of the clusters.
+    """
     middle = np.concatenate([_steps(table.measure, block) for block in table.blocks], axis=1)
     chain = np.vstack((table.simple_se**2, middle, table.se**2))
     with np.errstate(invalid="ignore", divide="ignore"):
         ratios = chain[1:] / chain[:-1]
+    apart = np.repeat(
+        [block.source.tells_strata_apart for block in table.blocks],
+        [len(block.group) for block in table.blocks],
+    )
+    # Replicates show clusters and strata together; their step holds both.
+    ratios[-1] = np.where(apart, ratios[-1], np.nan)
     return np.where(np.isnan(table.variance_ratio), np.nan, ratios)
 
 

@@ -252,7 +252,8 @@ class ComparisonTable(Tabular):
             One row per comparison: `group`, `versus`, `weights` (independent records with weights
             over the simple formula), `clusters` (sampling units, strata ignored and no covariance
             between the groups, over that), `covariance` (with it, over without) and `strata`
-            (strata and any finite population correction, over that).
+            (strata and any finite population correction, over that). With replicate weights
+            clusters and strata cannot be told apart: `clusters` holds both, `strata` is NaN.
         """
         from svyrates.compare.sources import variance_sources
 

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.design import SampleDesign
-from svyrates.errors import QuestionError, all_faults, some
+from svyrates.errors import DesignWarning, QuestionError, all_faults, some, warn
 from svyrates.rates.limits import INTERVALS, Interval, rate_limits
 from svyrates.rates.question import (
     Grouping,
@@ -19,13 +19,18 @@ from svyrates.rates.question import (
 )
 from svyrates.rates.source import CrudeRates, SideRates
 from svyrates.rates.table import Coverage, RateBlock, RateTable
-from svyrates.tally import tally_records
-from svyrates.totals import UnitTotals
+from svyrates.tally import tally_records, tally_replicates
+from svyrates.totals import CellTotals, ReplicateTotals, UnitTotals
+from svyrates.words import progress_bar
 
 __all__ = ["estimate_rates"]
 
 FloatArray = NDArray[np.float64]
-DF_RULES = ("domain", "design", "satterthwaite")
+# Where reading a column copies it, so many are held at a time.
+_FEW_COLUMNS = 6
+# Some 200 million weights are summed in a second.
+_WORTH_PROGRESS = 300_000_000
+DF_RULES = ("domain", "design", "satterthwaite", "scheme")
 
 
 def estimate_rates(
@@ -62,10 +67,10 @@ def estimate_rates(
         Method of the confidence limits of each rate.
     level : float
         Confidence level in (0, 1).
-    df : {"domain", "design", "satterthwaite"} or float, optional
+    df : {"domain", "design", "satterthwaite", "scheme"} or float, optional
         Degrees of freedom: sampling units with members minus strata with members (the default);
         units minus strata of the whole design; Satterthwaite's from the strata's contributions;
-        or a number.
+        those of the replicate scheme (the default with replicate weights); or a number.
     joint : bool
         Tally several outcomes together, so that they can be compared with each other.
 
@@ -104,30 +109,73 @@ def estimate_rates(
             "SampleDesign(data, weight=..., strata=..., clusters=...)."
         )
     check_options(interval, level, df, faults)
+    _check_rule(design, df, faults)
     outcomes = read_outcomes(design.frame, outcome, success, faults)
     inside, n_where_unknown = read_where(design.frame, where, faults)
     grouping = read_grouping(design.frame, by, faults)
     all_faults(QuestionError, "The question has", faults)
     pattern, coverage = _in_scope(design, grouping, inside, n_where_unknown)
     together = [tuple(range(len(outcomes)))] if joint else [(i,) for i in range(len(outcomes))]
+    rule = df or ("domain" if design.replicates is None else "scheme")
     blocks, parts = [], []
     for positions in together:
-        tally = tally_records(
-            design.tree.leaf,
-            design.tree.n_leaves,
-            design.weights,
-            pattern,
-            grouping.membership.shape[0],
-            [outcomes[position].level for position in positions],
-        )
-        units = UnitTotals(design.tree, tally, grouping.membership, design.n_records)
+        levels = [outcomes[position].level for position in positions]
+        units = _totals(design, grouping, pattern, levels)
         source = CrudeRates.of(units, design.df)
         block = RateBlock(positions, source)
         blocks.append(block)
-        parts.append(_measure(block, grouping, df))
-    return _assemble(
-        design, outcomes, grouping, coverage, blocks, parts, interval, level, df or "domain"
-    )
+        parts.append(_measure(block, grouping, rule))
+    return _assemble(design, outcomes, grouping, coverage, blocks, parts, interval, level, rule)
+
+
+def _totals(
+    design: SampleDesign,
+    grouping: Grouping,
+    pattern: NDArray[np.int32],
+    levels: list[NDArray[np.int8]],
+) -> CellTotals:
+    """Tally the records by sampling unit, or by replicate."""
+    membership = grouping.membership
+    n_patterns = membership.shape[0]
+    if design.replicates is None:
+        tree = design.tree
+        tally = tally_records(tree.leaf, tree.n_leaves, design.weights, pattern, n_patterns, levels)
+        return UnitTotals(tally, membership, design.n_records, tree)
+    replicates = design.replicates
+    cells = design.n_records * replicates.count
+    with progress_bar("Replicates", cells, worth=cells > _WORTH_PROGRESS) as progress:
+        sums = tally_replicates(
+            design.replicate_column,
+            replicates.names,
+            design.weights,
+            pattern,
+            n_patterns,
+            levels,
+            factors=replicates.factors,
+            scale=replicates.scale,
+            together=replicates.count if design.reads_in_place else _FEW_COLUMNS,
+            progress=progress,
+        )
+    return ReplicateTotals(sums.tally, membership, design.n_records, sums, replicates)
+
+
+def _check_rule(design: SampleDesign, df: str | float | None, faults: list[str]) -> None:
+    """Check that the rule for the degrees of freedom fits the kind of variance."""
+    replicates = design.replicates
+    if replicates is None:
+        if df == "scheme":
+            faults.append("df='scheme' goes with replicate weights; this design has none.")
+    elif df == "domain":
+        faults.append(
+            "df='domain' counts sampling units, which replicate weights do not show. Leave df out "
+            "for the scheme's own degrees of freedom, or give a number."
+        )
+    elif df == "design" and not design.names_units:
+        faults.append("df='design' needs the strata and clusters of the design, or give a number.")
+    elif df == "satterthwaite" and replicates.stratum is None:
+        faults.append(
+            "df='satterthwaite' needs a jackknife with its strata; leave df out, or give a number."
+        )
 
 
 def check_options(interval: str, level: float, df: str | float | None, faults: list[str]) -> None:
@@ -181,6 +229,7 @@ def _measure(block: RateBlock, grouping: Grouping, df: str | float | None) -> di
         "df": df_values,
         "kish_factor": found.kish_factor,
         "unweighted_rate": found.unweighted,
+        "gaps": found.stacked.spread.gaps()[: found.n.size],
     }
 
 
@@ -190,6 +239,7 @@ def variances(
     """Variance of each side's rate, NaN where undefined, and its degrees of freedom."""
     variance = found.variance()
     undefined = (found.n == 0) | found.certain | ((variance == 0.0) & (found.units < 2))
+    undefined |= np.isnan(variance)
     freedom = freedom_of(found, source, df)
     return np.where(undefined, np.nan, variance), np.where(found.n > 0, freedom, np.nan)
 
@@ -199,6 +249,8 @@ def freedom_of(found: SideRates, source: CrudeRates, df: str | float | None) -> 
     m = found.rate.size
     if df is None or df == "domain":
         return (found.units - found.strata).astype(np.float64)
+    if df == "scheme":
+        return np.full(m, np.nan if source.scheme_df is None else source.scheme_df)
     if df == "design":
         return np.full(m, float(source.design_df))
     if df == "satterthwaite":
@@ -220,6 +272,8 @@ def _assemble(
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
     with np.errstate(invalid="ignore", divide="ignore"):
         n_star = joined["rate"] * (1.0 - joined["rate"]) / joined["se"] ** 2
+    notes = _notes(joined, interval)
+    _warn_about_gaps(joined.pop("gaps"), joined["se"], design)
     low, high = rate_limits(joined["rate"], joined["n"], n_star, joined["df"], interval, level)
     return RateTable(
         outcomes=tuple(outcome.name for outcome in outcomes),
@@ -228,7 +282,7 @@ def _assemble(
         groups=grouping.labels,
         low=low,
         high=high,
-        notes=_notes(joined, interval),
+        notes=notes,
         interval=interval,
         level=level,
         df_rule=df_rule,
@@ -238,6 +292,19 @@ def _assemble(
         blocks=tuple(blocks),
         **joined,
     )
+
+
+def _warn_about_gaps(gaps: FloatArray, se: FloatArray, design: SampleDesign) -> None:
+    """Say where replicates were left out because a rate is undefined in them."""
+    left_out = (gaps > 0) & ~np.isnan(se)
+    if design.replicates is not None and left_out.any():
+        most = round(float(gaps[left_out].max()) * design.replicates.count)
+        warn(
+            f"{int(left_out.sum())} rates are undefined in some replicates (at most {most} of "
+            f"{design.replicates.count}): those replicates are left out of their variances, which "
+            "are scaled up.",
+            DesignWarning,
+        )
 
 
 def _notes(found: dict[str, FloatArray], interval: str) -> tuple[str, ...]:
@@ -253,7 +320,11 @@ def _notes(found: dict[str, FloatArray], interval: str) -> tuple[str, ...]:
             f"rate of exactly 0 or 1: no variance, limits{stand_in} use n, review it first",
         ),
         (
-            ~certain & (n > 0) & np.isnan(se),
+            ~certain & (n > 0) & np.isnan(se) & (found["gaps"] > 0),
+            "the rate is undefined in too many replicates: its variance is unknown",
+        ),
+        (
+            ~certain & (n > 0) & np.isnan(se) & (found["gaps"] == 0),
             "all members in one sampling unit: its variance cannot be estimated",
         ),
         (

@@ -11,9 +11,13 @@ from scipy import sparse
 
 from svyrates.totals import (
     ZERO,
+    CellTotals,
     Estimates,
     RatesOfSides,
+    ReplicateSupport,
+    ReplicateTotals,
     Spread,
+    Support,
     UnitSupport,
     UnitTotals,
     blocks,
@@ -89,27 +93,38 @@ class CrudeRates:
 
     Attributes
     ----------
-    units : UnitTotals of the cells
-    support : UnitSupport of the cells
+    units : totals of the cells
+    support : where their members sit
     squared_weights : (cells,) Σw² of the members
     design_df : units minus strata of the whole design
+    scheme_df : degrees of freedom of the replicates, None without them
     """
 
-    units: UnitTotals
-    support: UnitSupport
+    units: CellTotals
+    support: Support
     squared_weights: FloatArray
     design_df: int
+    scheme_df: float | None = None
 
     @classmethod
-    def of(cls, units: UnitTotals, design_df: int) -> CrudeRates:
+    def of(cls, units: CellTotals, design_df: int) -> CrudeRates:
         """Prepare the rates of a tally."""
         squares = units.by_cell(units.tally.ww, answered=True)
+        if isinstance(units, ReplicateTotals):
+            n = np.split(units.totals, 4)[0]
+            return cls(units, ReplicateSupport(n), squares, design_df, units.replicates.df)
+        assert isinstance(units, UnitTotals)  # noqa: S101 - the only other kind there is
         return cls(units, UnitSupport.of(units), squares, design_df)
+
+    @property
+    def tells_strata_apart(self) -> bool:
+        """Whether the parts of the design's variance can be told apart."""
+        return isinstance(self.units, UnitTotals)
 
     @property
     def n_cells(self) -> int:
         """Cells in the block."""
-        return int(self.support.members.shape[1])
+        return self.units.n_cells
 
     def estimates(self, sides: Any, kind: SpreadKind = "design") -> Estimates:
         """Estimates of `[rate | unweighted]` of each row of `sides` (m, cells)."""
@@ -138,11 +153,12 @@ class CrudeRates:
         )
 
     def _spread(self, kind: SpreadKind) -> Spread:
-        if kind == "design":
-            return self.units.spread
-        if kind == "unstratified":
+        if kind == "independent-records":
+            return self.units.independent_records
+        if kind == "unstratified" and isinstance(self.units, UnitTotals):
             return self.units.unstratified
-        return self.units.independent_records
+        # What replicates know of the design cannot be taken apart.
+        return self.units.spread
 
     def row(self, cells: dict[int, float]) -> Any:
         """One side as a sparse row: cell -> sign."""

@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-__all__ = ["Tally", "tally_records"]
+__all__ = ["Tally", "number_atoms", "tally_records"]
 
 IntArray = NDArray[np.intp]
 CodeArray = NDArray[np.int32]
@@ -69,7 +69,7 @@ def tally_records(
     -------
     Tally
     """
-    atom, n_atoms, decode = _atoms(pattern, n_patterns, levels)
+    atom, n_atoms, decode = number_atoms(pattern, n_patterns, levels)
     size = n_leaves * n_atoms
     pair = leaf.astype(np.int64)
     pair *= n_atoms
@@ -100,7 +100,7 @@ def tally_records(
     )
 
 
-def _atoms(
+def number_atoms(
     pattern: CodeArray, n_patterns: int, levels: list[NDArray[np.int8]]
 ) -> tuple[NDArray[Any], int, tuple[IntArray, NDArray[np.int8]]]:
     """Number the atoms: densely for few outcomes, else only the joint patterns that occur."""

@@ -47,6 +47,10 @@ class Spread(Protocol):
         """Its diagonal, shape (k,), without forming the matrix."""
         ...
 
+    def gaps(self) -> FloatArray:
+        """Share of the replicates in which each element is undefined, shape (k,)."""
+        ...
+
     def satterthwaite(self, plus: IntArray, minus: IntArray) -> FloatArray:
         """Satterthwaite degrees of freedom of `x[plus] - x[minus]`; a minus of -1 is nothing."""
         ...

@@ -9,15 +9,16 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
+from svyrates.totals.cells import blocks
 from svyrates.totals.matrices import scaled
-from svyrates.totals.unit_totals import blocks
 
 __all__ = ["Linear", "RatesOfSides"]
 
 FloatArray = NDArray[np.float64]
 
-# Everyone less a group may leave rounding noise of weights, but never half a person.
-_NOBODY = 0.5
+# Everyone less a group may leave rounding noise where nobody is; a replicate may count a person as
+# a fraction, but never as so little.
+_NOBODY = 1e-6
 
 
 @dataclass(frozen=True, slots=True)

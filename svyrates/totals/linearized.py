@@ -66,6 +66,10 @@ class LinearizedSpread:
         formed_from = np.asarray(squares.T @ np.abs(self.weight)).ravel()
         return np.where(variance < ZERO * formed_from, 0.0, variance)
 
+    def gaps(self) -> FloatArray:
+        """Nothing is undefined in a part of a linearized spread, shape (k,)."""
+        return np.zeros(self.rows.shape[1])
+
     def satterthwaite(self, plus: IntArray, minus: IntArray) -> FloatArray:
         """`(ΣV_h)² / Σ(V_h²/(n_h - 1))` over the strata of the contrast `x[plus] - x[minus]`.
 

@@ -12,9 +12,26 @@ from scipy import sparse
 from svyrates.totals.matrices import lighter
 from svyrates.totals.unit_totals import UnitTotals
 
-__all__ = ["UnitSupport"]
+__all__ = ["ReplicateSupport", "UnitSupport"]
 
 IntArray = NDArray[np.intp]
+
+
+@dataclass(frozen=True, slots=True)
+class ReplicateSupport:
+    """With replicate weights nothing is known about units; every member stands for itself.
+
+    Attributes
+    ----------
+    n : (cells,) members of each cell
+    """
+
+    n: NDArray[np.float64]
+
+    def domain(self, sides: Any) -> tuple[IntArray, IntArray]:
+        """Members, and no strata, for each row of `sides` (sides, cells)."""
+        members = np.rint(np.asarray(sides @ self.n)).astype(np.intp)
+        return members, np.zeros_like(members)
 
 
 @dataclass(frozen=True, slots=True)

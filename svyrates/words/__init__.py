@@ -2,6 +2,7 @@
 
 from svyrates.words.escape import display_width, for_html, for_terminal, shorten
 from svyrates.words.numbers import count, fixed, p_value, percent, points, significant
+from svyrates.words.progress import progress_bar
 from svyrates.words.sentences import join_words, plural
 from svyrates.words.table import Column, Table
 from svyrates.words.tabular import Tabular
@@ -20,6 +21,7 @@ __all__ = [
     "percent",
     "plural",
     "points",
+    "progress_bar",
     "shorten",
     "significant",
 ]

@@ -82,6 +82,17 @@ def test_every_kind_of_file(survey: pd.DataFrame, name: str, tmp_path: Path) -> 
     assert found["verdict"].tolist() == expected["verdict"].tolist()
 
 
+@pytest.mark.parametrize("name", ["s.csv", "s.csv.gz", "s.csv.zip"])
+def test_a_large_file_is_read_the_same(
+    survey: pd.DataFrame, name: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Large files are read through a counter that moves the progress bar."""
+    survey.to_csv(tmp_path / name, index=False)
+    plain = read_columns(tmp_path / name, ["wt", "damp"])
+    monkeypatch.setattr("svyrates.command.files._WORTH_PROGRESS", 0)
+    pd.testing.assert_frame_equal(read_columns(tmp_path / name, ["wt", "damp"]), plain)
+
+
 def test_xport_file(tmp_path: Path) -> None:
     """Zeros, missing values and text as agencies publish them."""
     columns = {"W": [1.5, 2.0, 0.0, 4.25], "Y": [0.0, 1.0, 1.0, None], "G": ["a", "b", "a", "b"]}

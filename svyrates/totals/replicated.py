@@ -1,0 +1,136 @@
+"""Replicated spread: the vector itself under every replicate.
+
+`V = Σ c_r (θ_r - θ)²` about the full-sample estimate, or about the replicate mean. Sources: Wolter
+(2007), chapters 3 to 5.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from svyrates.totals.cells import CellTotals
+from svyrates.totals.estimates import ZERO, SmoothFunction
+
+if TYPE_CHECKING:
+    from svyrates.design.replicates import ReplicateSet
+    from svyrates.tally import ReplicateTally
+
+__all__ = ["MOST_LEFT_OUT", "ReplicateTotals", "ReplicatedSpread"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.intp]
+
+# Beyond this share of replicates in which a rate is undefined, its variance is undefined too.
+MOST_LEFT_OUT = 0.10
+
+
+@dataclass(frozen=True)
+class ReplicatedSpread:
+    """A vector under every replicate.
+
+    Attributes
+    ----------
+    values : (replicates, k); NaN where undefined in a replicate
+    centre : (k,) the vector in the full sample
+    replicates : the scheme
+    """
+
+    values: FloatArray
+    centre: FloatArray
+    replicates: ReplicateSet
+
+    def apply(self, function: SmoothFunction, at: FloatArray) -> ReplicatedSpread:
+        """The function under every replicate."""
+        return replace(self, values=function.value(self.values), centre=function.value(at))
+
+    def gaps(self) -> FloatArray:
+        """Share of the replicates in which each element is undefined, shape (k,)."""
+        missing = np.isnan(self.values).mean(axis=0)
+        # An element that the full sample does not define has no variance, and no gaps.
+        return np.where(np.isnan(self.centre), 0.0, missing)
+
+    def covariance(self) -> FloatArray:
+        """Covariance matrix, shape (k, k).
+
+        All elements use the same replicates: those in which every element with few enough gaps is
+        defined, their coefficients scaled up for the ones left out.
+        """
+        usable = self._usable()
+        missing = np.asarray(np.isnan(self.values[:, usable]).any(axis=1))
+        if missing.mean() > MOST_LEFT_OUT:
+            usable &= self.gaps() == 0.0
+            missing = np.asarray(np.isnan(self.values[:, usable]).any(axis=1))
+        kept = ~missing
+        away = self._away(self.values[kept][:, usable], self.centre[usable], kept)
+        weight = self._coefficients(kept)
+        matrix = np.full((self.centre.size, self.centre.size), np.nan)
+        matrix[np.ix_(usable, usable)] = away.T @ (weight[:, None] * away)
+        return matrix
+
+    def variance(self) -> FloatArray:
+        """Variances, shape (k,), each from all replicates in which it is defined."""
+        usable = self._usable()
+        variance = np.full(self.centre.size, np.nan)
+        whole = usable & (self.gaps() == 0.0)
+        every = np.ones(self.values.shape[0], dtype=bool)
+        away = self._away(self.values[:, whole], self.centre[whole], every)
+        variance[whole] = self._coefficients(every) @ away**2
+        for position in np.flatnonzero(usable & ~whole):
+            kept = ~np.isnan(self.values[:, position])
+            away = self._away(self.values[kept, position], self.centre[position], kept)
+            variance[position] = self._coefficients(kept) @ away**2
+        with np.errstate(invalid="ignore"):
+            return np.where(variance < ZERO * self.centre**2 * ZERO, 0.0, variance)
+
+    def satterthwaite(self, plus: IntArray, minus: IntArray) -> FloatArray:
+        """`(ΣV_h)² / Σ(V_h²/(n_h - 1))` over the strata of the replicates."""
+        stratum, units = self.replicates.stratum, self.replicates.units
+        if stratum is None or units is None:
+            return np.full(plus.size, np.nan)
+        away = self.values - self.centre
+        contrast = away[:, plus] - np.where(minus >= 0, away[:, minus], 0.0)
+        each = self.replicates.coefficients[:, None] * contrast**2
+        strata, first, position = np.unique(stratum, return_index=True, return_inverse=True)
+        by_stratum = np.zeros((strata.size, plus.size))
+        np.add.at(by_stratum, position, each)
+        squares = (by_stratum**2 / (units[first] - 1.0)[:, None]).sum(axis=0)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.where(squares > 0, by_stratum.sum(axis=0) ** 2 / squares, np.nan)
+
+    def _usable(self) -> NDArray[np.bool_]:
+        most = MOST_LEFT_OUT if self.replicates.may_leave_out else 0.0
+        return ~np.isnan(self.centre) & (self.gaps() <= most)
+
+    def _away(self, values: FloatArray, centre: Any, kept: NDArray[np.bool_]) -> FloatArray:
+        if self.replicates.centre_on_mean and kept.any():
+            centre = values.mean(axis=0)
+        return np.asarray(values - centre)
+
+    def _coefficients(self, kept: NDArray[np.bool_]) -> FloatArray:
+        n_kept = max(int(kept.sum()), 1)
+        return np.asarray(self.replicates.coefficients[kept] * (kept.size / n_kept))
+
+
+@dataclass(frozen=True)
+class ReplicateTotals(CellTotals):
+    """Totals of the cells under every replicate.
+
+    Attributes
+    ----------
+    sums : the tally under every replicate
+    replicates : the scheme
+    """
+
+    sums: ReplicateTally
+    replicates: ReplicateSet
+
+    @cached_property
+    def spread(self) -> ReplicatedSpread:
+        """Totals under every replicate."""
+        values = self.laid_out(self.sums.n, self.sums.w)
+        return ReplicatedSpread(values, self.totals, self.replicates)
