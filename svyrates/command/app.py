@@ -99,6 +99,7 @@ def compare(
         Names, typer.Option(help="Answer that counts as success; may be repeated.")
     ] = None,
     weight: Annotated[str | None, typer.Option(help="Column of sampling weights.")] = None,
+    weight_decimals: Annotated[int, typer.Option(help="Implied decimals of the weight.")] = 0,
     strata: Annotated[Names, typer.Option(help="Stratum column; repeat it to cross.")] = None,
     clusters: Annotated[
         Names, typer.Option(help="Sampling-unit column; repeat it for later stages.")
@@ -109,6 +110,46 @@ def compare(
     single_cluster_strata: Annotated[
         str, typer.Option(help="error, collapse, grand-mean or self-representing.")
     ] = "error",
+    replicates: Annotated[
+        Names,
+        typer.Option(help="Replicate weights: a pattern such as 'rw_*', or columns; repeatable."),
+    ] = None,
+    scheme: Annotated[
+        str | None,
+        typer.Option(
+            help="How the replicates were made: delete-one-jackknife, stratified-jackknife, "
+            "paired-jackknife, balanced-repeated-replication, fay, bootstrap, "
+            "successive-difference or coefficients."
+        ),
+    ] = None,
+    fay: Annotated[float | None, typer.Option(help="Fay's factor k in [0, 1).")] = None,
+    units_per_stratum: Annotated[
+        list[int] | None,
+        typer.Option(help="Stratified jackknife: units in the stratum of each replicate."),
+    ] = None,
+    both_halves: Annotated[
+        bool, typer.Option("--both-halves", help="Paired jackknife with two replicates a pair.")
+    ] = False,
+    mean_size: Annotated[int, typer.Option(help="Mean bootstrap: replicates in each mean.")] = 1,
+    coefficient: Annotated[
+        list[float] | None,
+        typer.Option(help="For --scheme coefficients: one, or one for each replicate."),
+    ] = None,
+    centre: Annotated[
+        str, typer.Option(help="Centre of the replicates: full-sample or replicate-mean.")
+    ] = "full-sample",
+    factors: Annotated[
+        bool, typer.Option("--factors", help="Replicates are factors that multiply the weight.")
+    ] = False,
+    replicate_decimals: Annotated[
+        int, typer.Option(help="Implied decimals of the replicates.")
+    ] = 0,
+    replicate_file: Annotated[
+        Path | None, typer.Option(help="File that holds the replicates, merged on --key.")
+    ] = None,
+    key: Annotated[
+        Names, typer.Option(help="Key column of both files; repeat it for several.")
+    ] = None,
     where: Annotated[
         Names,
         typer.Option(
@@ -157,5 +198,8 @@ def compare(
     """Compare an outcome's rate between the groups of a survey file."""
     settings: dict[str, Any] = dict(locals())
     from svyrates.command.compare import run_compare
+    from svyrates.command.survey import SurveyFile
 
-    run_compare(**settings)
+    names = SurveyFile.__dataclass_fields__
+    survey = SurveyFile(**{name: value for name, value in settings.items() if name in names})
+    run_compare(survey, **{name: value for name, value in settings.items() if name not in names})

@@ -13,10 +13,10 @@ import pandas as pd
 import typer
 from numpy.typing import NDArray
 
-from svyrates.command.files import read_columns, write_table
+from svyrates.command.files import write_table
+from svyrates.command.survey import SurveyFile
 from svyrates.compare import EVERYONE, EVERYONE_ELSE, ComparisonTable, compare_rates
 from svyrates.compare.explain import ADVICE
-from svyrates.design import SampleDesign
 from svyrates.design.columns import ColumnFault, code_column, open_frame, read_mask
 from svyrates.errors import DataFileError, QuestionError, RatesWarning, some
 from svyrates.rates import RateTable, estimate_rates
@@ -27,16 +27,11 @@ BoolArray = NDArray[np.bool_]
 
 
 def run_compare(
+    survey: SurveyFile,
     *,
-    file: Path,
     outcome: list[str],
     by: list[str] | None,
     success: list[str] | None,
-    weight: str | None,
-    strata: list[str] | None,
-    clusters: list[str] | None,
-    population: list[str] | None,
-    single_cluster_strata: str,
     where: list[str] | None,
     versus: str | None,
     within: list[str] | None,
@@ -51,25 +46,13 @@ def run_compare(
     out_rates: list[Path] | None,
     percent: bool,
     explain: bool,
-    separator: str | None,
-    encoding: str,
 ) -> None:
     """Read the columns, ask the question, print the tables and write them."""
     conditions = [_condition(text) for text in where or ()]
-    named = [*outcome, *(by or ()), *(strata or ()), *(clusters or ()), *(population or ())]
-    named += [column for column, _ in conditions] + ([weight] if weight else [])
     for path in (*(out or ()), *(out_rates or ())):
         if path.suffix.lower() not in (".csv", ".json"):
             raise DataFileError(f"{path}: results are written as '.csv' or '.json'.")
-    data = read_columns(file, named, separator=separator, encoding=encoding)
-    design = SampleDesign(
-        data,
-        weight=weight,
-        strata=strata,
-        clusters=clusters,
-        population=population,
-        single_cluster_strata=single_cluster_strata,  # type: ignore[arg-type]
-    )
+    data, design = survey.read([*outcome, *(by or ()), *(column for column, _ in conditions)])
     rates = estimate_rates(
         design,
         outcome if len(outcome) > 1 else outcome[0],

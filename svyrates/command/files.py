@@ -10,6 +10,7 @@ import zipfile
 import zlib
 from collections.abc import Callable, Iterable, Iterator
 from contextlib import AbstractContextManager, contextmanager
+from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import IO, Any, cast
 
@@ -46,7 +47,7 @@ def read_columns(
     ----------
     path : Path
         CSV or TSV (also compressed), Parquet, or XPORT (.xpt).
-    columns : names of the columns to read; the others are left alone
+    columns : names of the columns to read, or patterns such as `rw_*`; the others are left alone
     separator : of a text file; a tab for .tsv, else a comma
     encoding : of a text or XPORT file
 
@@ -91,15 +92,22 @@ def _separator(kind: str) -> str:
     return "\t" if kind == ".tsv" else ","
 
 
-def _check_columns(path: Path, wanted: list[str], names: list[str], hint: str = "") -> None:
+def _choose(path: Path, wanted: list[str], names: list[str], hint: str = "") -> list[str]:
+    """The columns wanted, patterns replaced by the columns that fit them."""
     twice = sorted({name for name in names if names.count(name) > 1})
     if twice:
         raise DataFileError(
             f"{path}: columns of the same name: {some(twice)}. Rename them in the file first."
         )
-    absent = [name for name in wanted if name not in names]
+    chosen: dict[str, None] = {}
+    absent = []
+    for name in wanted:
+        fitting = [name] if name in names else _fitting(name, names)
+        chosen |= dict.fromkeys(fitting)
+        if not fitting:
+            absent.append(name)
     if not absent:
-        return
+        return list(chosen)
     parts = []
     for name in absent:
         near = difflib.get_close_matches(name, names, n=1)
@@ -108,6 +116,12 @@ def _check_columns(path: Path, wanted: list[str], names: list[str], hint: str = 
         f"{path}: no column {', '.join(parts)}. The file has {len(names)} columns: "
         f"{some(names, 12)}.{hint}"
     )
+
+
+def _fitting(pattern: str, names: list[str]) -> list[str]:
+    if not any(mark in pattern for mark in "*?["):
+        return []
+    return [name for name in names if fnmatchcase(name, pattern)]
 
 
 def _read_text(
@@ -124,7 +138,7 @@ def _read_text(
         names = [str(name) for name in header.iloc[0]]
         other = next((mark for mark in ";\t|," if mark != separator and mark in names[0]), None)
         hint = f" It looks separated by {other!r}: use --separator." if other else ""
-        _check_columns(path, wanted, names, hint if len(names) == 1 else "")
+        wanted = _choose(path, wanted, names, hint if len(names) == 1 else "")
         with _watched(path) as file:
             frame: pd.DataFrame = pd.read_csv(file, usecols=wanted, low_memory=False, **options)
     except UnicodeError as problem:
@@ -154,7 +168,7 @@ def _read_parquet(path: Path, wanted: list[str]) -> pd.DataFrame:
             f"{path}: reading Parquet needs pyarrow: pip install 'svyrates[parquet]'."
         ) from problem
     try:
-        _check_columns(path, wanted, pq.read_schema(path).names)
+        wanted = _choose(path, wanted, pq.read_schema(path).names)
         with _sign_of_life(path):
             return cast("pd.DataFrame", pq.read_table(path, columns=wanted).to_pandas())
     except (pa.ArrowException, OSError) as problem:
@@ -178,7 +192,7 @@ def _read_xport(path: Path, wanted: list[str], encoding: str) -> pd.DataFrame:
         raise DataFileError(
             f"{path}: cannot be read as an XPORT file ({type(problem).__name__})."
         ) from problem
-    _check_columns(path, wanted, [str(name) for name in frame.columns])
+    wanted = _choose(path, wanted, [str(name) for name in frame.columns])
     frame = frame[wanted].copy()
     for name in wanted:
         column = frame[name]

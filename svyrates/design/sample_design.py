@@ -36,6 +36,8 @@ class SampleDesign:
         lazy frame is collected once.
     weight : str, optional
         Column of sampling weights, non-negative and finite. Without it every record has weight 1.
+    weight_decimals : int
+        Implied decimals: the weights are the column divided by 10 to this power.
     strata : str or list of str, optional
         Stratum column; several columns are crossed. Without it the sample is one stratum.
     clusters : str or list of str, optional
@@ -51,6 +53,9 @@ class SampleDesign:
         What to do about strata with a single sampling unit: refuse (the default); join them in
         sorted pairs, or as a mapping {stratum: partner} says; compare the unit with the mean over
         all units; or let the units of the next stage take its place.
+    replicates : ReplicateWeights, optional
+        Replicate weights of the file. The variance is then theirs; `strata` and `clusters` may
+        still be named, for the degrees of freedom.
 
     Raises
     ------
@@ -78,6 +83,7 @@ class SampleDesign:
         data: Any,
         *,
         weight: str | None = None,
+        weight_decimals: int = 0,
         strata: str | Sequence[str] | None = None,
         clusters: str | Sequence[str] | None = None,
         population: str | Sequence[str] | None = None,
@@ -89,6 +95,7 @@ class SampleDesign:
         self._frame = frame
         self._columns: dict[str, Any] = {
             "weight": weight,
+            "weight_decimals": weight_decimals,
             "strata": _names(strata),
             "clusters": _names(clusters),
             "population": _names(population),
@@ -98,7 +105,7 @@ class SampleDesign:
                 f"single_cluster_strata must be one of {some(POLICIES)} or a mapping of stratum "
                 f"to partner; got {single_cluster_strata!r}."
             )
-        self._weights = read_weights(frame, weight, faults)
+        self._weights = read_weights(frame, weight, weight_decimals, faults)
         self._tree, self._lone, self._repeated = read_tree(
             frame, self._columns, single_cluster_strata if replicates is None else None, faults
         )
@@ -135,6 +142,7 @@ class SampleDesign:
         return SampleDesign(
             data,
             weight=self._columns["weight"],
+            weight_decimals=self._columns["weight_decimals"],
             strata=self._columns["strata"] or None,
             clusters=self._columns["clusters"] or None,
             replicates=replicates,

@@ -60,7 +60,7 @@ class DesignSummary(Tabular):
         relative = abs(total / positive - 1.0) <= 0.01
         facts = [
             ("records", count(weights.size) + (f" ({count(zero)} of weight zero)" if zero else "")),
-            ("weight", columns["weight"] or "none: every record has weight 1"),
+            ("weight", _weight(columns)),
             ("sum of weights", count(total) + (" (relative weights)" if relative else "")),
             ("unequal-weighting factor (Kish)", fixed(_kish(weights, positive), 2)),
         ]
@@ -126,6 +126,13 @@ def _replicated(replicates: ReplicateSet) -> list[tuple[str, str]]:
 def _kish(weights: NDArray[np.float64], positive: int) -> float:
     total = float(weights.sum())
     return positive * float(np.dot(weights, weights)) / total**2
+
+
+def _weight(columns: Mapping[str, Any]) -> str:
+    if columns["weight"] is None:
+        return "none: every record has weight 1"
+    decimals = columns["weight_decimals"]
+    return f"{columns['weight']}, {decimals} implied decimals" if decimals else columns["weight"]
 
 
 def _strata(names: tuple[str, ...], n_strata: int) -> str:

@@ -12,14 +12,19 @@ __all__ = ["read_weights"]
 FloatArray = NDArray[np.float64]
 
 
-def read_weights(frame: Frame, name: str | None, faults: list[str]) -> FloatArray:
+def read_weights(frame: Frame, name: str | None, decimals: int, faults: list[str]) -> FloatArray:
     """Read the weights, shape (records,); all ones without a column. Faults go on the list."""
     if name is None:
+        return np.ones(len(frame))
+    if isinstance(decimals, bool) or not isinstance(decimals, int) or decimals < 0:
+        faults.append(f"weight_decimals must be a whole number from 0 on; got {decimals!r}.")
         return np.ones(len(frame))
     values = fault_or(faults, numbers, frame, name, "weight")
     if values is None:
         return np.ones(len(frame))
     weights = np.asarray(values, dtype=np.float64)
+    if decimals:
+        weights = weights / 10.0**decimals
     # One sum finds NaN and infinity, one minimum finds negatives: the usual file is clean.
     with np.errstate(over="ignore", invalid="ignore"):
         clean = bool(np.isfinite(weights.sum()) and weights.min() >= 0.0)

@@ -230,6 +230,7 @@ def _measure(block: RateBlock, grouping: Grouping, df: str | float | None) -> di
         "kish_factor": found.kish_factor,
         "unweighted_rate": found.unweighted,
         "gaps": found.stacked.spread.gaps()[: found.n.size],
+        "astray": found.stacked.spread.astray()[: found.n.size],
     }
 
 
@@ -273,7 +274,7 @@ def _assemble(
     with np.errstate(invalid="ignore", divide="ignore"):
         n_star = joined["rate"] * (1.0 - joined["rate"]) / joined["se"] ** 2
     notes = _notes(joined, interval)
-    _warn_about_gaps(joined.pop("gaps"), joined["se"], design)
+    _question_replicates(joined.pop("gaps"), joined.pop("astray") > 0, joined["se"], design)
     low, high = rate_limits(joined["rate"], joined["n"], n_star, joined["df"], interval, level)
     return RateTable(
         outcomes=tuple(outcome.name for outcome in outcomes),
@@ -294,15 +295,27 @@ def _assemble(
     )
 
 
-def _warn_about_gaps(gaps: FloatArray, se: FloatArray, design: SampleDesign) -> None:
-    """Say where replicates were left out because a rate is undefined in them."""
+def _question_replicates(
+    gaps: FloatArray, astray: NDArray[np.bool_], se: FloatArray, design: SampleDesign
+) -> None:
+    """Say where replicates were left out, and where they do not lie about the estimate."""
+    if design.replicates is None:
+        return
     left_out = (gaps > 0) & ~np.isnan(se)
-    if design.replicates is not None and left_out.any():
-        most = round(float(gaps[left_out].max()) * design.replicates.count)
+    count = design.replicates.count
+    if left_out.any():
+        most = round(float(gaps[left_out].max()) * count)
         warn(
             f"{int(left_out.sum())} rates are undefined in some replicates (at most {most} of "
-            f"{design.replicates.count}): those replicates are left out of their variances, which "
-            "are scaled up.",
+            f"{count}): those replicates are left out of their variances, which are scaled up.",
+            DesignWarning,
+        )
+    if astray.any():
+        warn(
+            f"{int(astray.sum())} of {astray.size} rates differ from the mean of their replicates "
+            "by more than the replicates differ from each other. Are these the columns that belong "
+            "to this weight, and all of them? Standard errors cannot be trusted before that is "
+            "settled.",
             DesignWarning,
         )
 

@@ -51,6 +51,10 @@ class Spread(Protocol):
         """Share of the replicates in which each element is undefined, shape (k,)."""
         ...
 
+    def astray(self) -> NDArray[np.bool_]:
+        """Elements whose replicates do not lie about the estimate, shape (k,)."""
+        ...
+
     def satterthwaite(self, plus: IntArray, minus: IntArray) -> FloatArray:
         """Satterthwaite degrees of freedom of `x[plus] - x[minus]`; a minus of -1 is nothing."""
         ...

@@ -70,6 +70,10 @@ class LinearizedSpread:
         """Nothing is undefined in a part of a linearized spread, shape (k,)."""
         return np.zeros(self.rows.shape[1])
 
+    def astray(self) -> NDArray[np.bool_]:
+        """A linearized spread lies about the estimate by construction, shape (k,)."""
+        return np.zeros(self.rows.shape[1], dtype=bool)
+
     def satterthwaite(self, plus: IntArray, minus: IntArray) -> FloatArray:
         """`(ΣV_h)² / Σ(V_h²/(n_h - 1))` over the strata of the contrast `x[plus] - x[minus]`.
 

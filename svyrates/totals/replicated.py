@@ -27,6 +27,8 @@ IntArray = NDArray[np.intp]
 
 # Beyond this share of replicates in which a rate is undefined, its variance is undefined too.
 MOST_LEFT_OUT = 0.10
+# The square of t beyond which a mean of so many replicates is no accident.
+_FAR_OFF, _ENOUGH_TO_TELL = 25.0, 10
 
 
 @dataclass(frozen=True)
@@ -53,6 +55,21 @@ class ReplicatedSpread:
         missing = np.isnan(self.values).mean(axis=0)
         # An element that the full sample does not define has no variance, and no gaps.
         return np.where(np.isnan(self.centre), 0.0, missing)
+
+    def astray(self) -> NDArray[np.bool_]:
+        """Elements whose replicates do not lie about the full-sample estimate, shape (k,).
+
+        Replicates of every scheme do. Their mean is tested against the estimate by a t statistic
+        that chance, or the bias of a ratio, does not bring to these bounds (common practice).
+        """
+        defined = ~np.isnan(self.values)
+        count = defined.sum(axis=0)
+        away = np.where(defined, self.values - self.centre, 0.0)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            mean = away.sum(axis=0) / count
+            about_mean = (away**2).sum(axis=0) / count - mean**2
+            beyond = count * mean**2 > np.maximum(_FAR_OFF, count / 4.0) * about_mean
+        return np.asarray(beyond & (np.abs(mean) > ZERO) & (count >= _ENOUGH_TO_TELL))
 
     def covariance(self) -> FloatArray:
         """Covariance matrix, shape (k, k).

@@ -153,6 +153,53 @@ def test_where(survey: pd.DataFrame, file: Path, tmp_path: Path) -> None:
     assert found["n"].tolist() == expected["n"].tolist()
 
 
+def _replicated(survey: pd.DataFrame) -> sr.SampleDesign:
+    plain = survey.astype({"tenure": object, "sex": object})
+    design = sr.SampleDesign(plain, weight="wt", strata="district", clusters="block")
+    return sr.make_replicates(design, "bootstrap", count=40, seed=5)
+
+
+REPLICATES = ["--weight", "wt", "--replicates", "replicate_*", "--scheme", "bootstrap"]
+
+
+def test_replicates(survey: pd.DataFrame, tmp_path: Path) -> None:
+    design = _replicated(survey)
+    data = design.frame.to_native()
+    data.to_csv(tmp_path / "all.csv", index=False)
+    declared = sr.ReplicateWeights("replicate_*", scheme="bootstrap")
+    again = sr.SampleDesign(data, weight="wt", replicates=declared)
+    rates = sr.estimate_rates(again, "cold_home", success=["often", "always"], by="tenure")
+    out = tmp_path / "rates.json"
+    asked = [*REPLICATES, *QUESTION, "--by", "tenure", "--out-rates", out]
+    assert run("compare", tmp_path / "all.csv", *asked) == 0
+    found = pd.DataFrame(json.loads(out.read_text(encoding="utf-8"))["rows"])
+    np.testing.assert_allclose(found["se"], rates.se, rtol=1e-9)
+    np.testing.assert_allclose(found["df"], rates.df)
+
+
+def test_replicates_in_a_file_of_their_own(survey: pd.DataFrame, tmp_path: Path) -> None:
+    """Keys in another order, implied decimals, Fay's factor, centred on the mean."""
+    whole = _replicated(survey).frame.to_native().assign(id=np.arange(len(survey)))
+    names = [name for name in whole if str(name).startswith("replicate_")]
+    apart = whole[["id", *names]].iloc[::-1].copy()
+    apart[names] = (apart[names] * 10_000).round().astype(np.int64)
+    whole.drop(columns=names).to_csv(tmp_path / "survey.csv", index=False)
+    apart.to_csv(tmp_path / "weights.csv", index=False)
+    declared = sr.ReplicateWeights(names, "fay", fay=0.3, centre="replicate-mean")
+    design = sr.SampleDesign(whole, weight="wt", replicates=declared)
+    rates = sr.estimate_rates(design, "cold_home", success=["often", "always"], by="tenure")
+    out = tmp_path / "rates.json"
+    asked = [
+        *["--weight", "wt", "--replicates", "replicate_?", "--replicates", "replicate_??"],
+        *["--scheme", "fay", "--fay", 0.3, "--centre", "replicate-mean"],
+        *["--replicate-decimals", 4, "--replicate-file", tmp_path / "weights.csv", "--key", "id"],
+    ]
+    question = [*QUESTION, "--by", "tenure", "--out-rates", out]
+    assert run("compare", tmp_path / "survey.csv", *asked, *question) == 0
+    found = pd.DataFrame(json.loads(out.read_text(encoding="utf-8"))["rows"])
+    np.testing.assert_allclose(found["se"], rates.se, rtol=1e-4)
+
+
 def test_output_at_a_glance(file: Path, capsys: pytest.CaptureFixture[str]) -> None:
     ask = [*QUESTION, "--by", "tenure", "--percent", "--explain"]
     assert run("compare", file, *DESIGN, *ask) == 0
@@ -223,6 +270,12 @@ BAD: list[tuple[str, bytes | str, list[str], str]] = [
     ("g.csv", GOOD, [*ASK, "--out", "x.xlsx"], "results are written as '.csv' or '.json'"),
     ("g.csv", GOOD, [*ASK, "--out", "/dev/null/no/x.csv"], "cannot be written"),
     ("g.csv", GOOD, ["--outcome", "y", "--out", "x.csv"], "there are none without --by"),
+    ("g.csv", GOOD, [*ASK, "--replicates", "w"], "--replicates and --scheme go together"),
+    ("g.csv", GOOD, [*ASK, "--key", "w"], "--replicate-file and --key go together"),
+    ("g.csv", GOOD, [*ASK, "--key", "w", "--replicate-file", "g.csv"], "needs --replicates"),
+    ("g.csv", GOOD, [*ASK, "--replicates", "z*", "--scheme", "bootstrap"], "no column 'z*'"),
+    ("g.csv", GOOD, [*ASK, "--replicates", "w", "--scheme", "bootstrap"], "name 1 columns"),
+    ("g.csv", GOOD, [*ASK, "--replicates", "[wc]", "--scheme", "jack"], "scheme must be one of"),
     ("g.csv", GOOD, [*ASK, "--separator", ";;"], "separator must be one character"),
     ("g.csv", GOOD, [*ASK, "--encoding", "klingon"], "there is no encoding 'klingon'"),
 ]

@@ -167,6 +167,44 @@ def test_implied_decimals() -> None:
     np.testing.assert_allclose(one.se, other.se, rtol=1e-6)
 
 
+def test_implied_decimals_of_the_weight() -> None:
+    data = _file()
+    scaled = data.assign(w=(data["w"] * 10_000).round().astype(np.int64))
+    declared = sr.ReplicateWeights("rw_*", "bootstrap")
+    with pytest.warns(sr.DesignWarning, match="implied decimals"):
+        sr.SampleDesign(scaled, weight="w", replicates=declared)
+    design = sr.SampleDesign(scaled, weight="w", weight_decimals=4, replicates=declared)
+    assert design.sum_of_weights == pytest.approx(data["w"].sum(), rel=1e-4)
+    assert "w, 4 implied decimals" in str(design)
+    with pytest.raises(sr.DesignError, match="weight_decimals must be a whole number"):
+        sr.SampleDesign(scaled, weight="w", weight_decimals=-1)
+
+
+def test_replicates_of_another_weight_are_questioned() -> None:
+    """Their sums look right, but the rates under them do not lie about the estimate."""
+    data = _file(n=400, count=40)
+    tilted = data["w"] * np.where(data["y"] == 1, 1.6, 1.0)
+    wrong = data.assign(w=tilted * data["w"].sum() / tilted.sum())
+    with pytest.warns(sr.DesignWarning, match="1 of 1 rates differ from the mean of their"):
+        sr.estimate_rates(_design(wrong, "rw_*", "bootstrap"), "y")
+    sr.estimate_rates(_design(data, "rw_*", "bootstrap"), "y")
+
+
+@pytest.mark.parametrize("scheme", ["stratified-jackknife", "bootstrap"])
+def test_replicates_of_small_groups_are_not_questioned(scheme: Any) -> None:
+    """Rates of a few people move far, and only some replicates move them at all."""
+    survey = sr.demo_survey(wave="2024")
+    design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
+    count = {"count": 200, "seed": 3} if scheme == "bootstrap" else {}
+    replicated = sr.make_replicates(design, scheme, **count)
+    few = np.zeros(len(survey), dtype=bool)
+    few[::150] = True
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        warnings.filterwarnings("ignore", "1 rates are undefined|.* rates are undefined")
+        sr.estimate_rates(replicated, "damp", by=["sex", "tenure"], where=few)
+
+
 def test_negative_replicate_weights_are_kept_and_counted() -> None:
     data = _file()
     data.loc[:4, "rw_2"] *= -1
