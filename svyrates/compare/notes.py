@@ -46,7 +46,7 @@ def comparison_notes(
     conditions = [
         (empty, "too little sample for this test: a group is empty"),
         (one_unit & ~gaps, "too little sample for this test: a group sits in one sampling unit"),
-        (gaps, "too little sample for this test: a rate is undefined in too many replicates"),
+        (gaps, f"too little sample for this test: {joint.no_variance}"),
         (
             no_df,
             f"too little sample for this test: no degrees of freedom, {one_each}",

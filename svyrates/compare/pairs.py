@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.errors import ComparisonError, some
-from svyrates.rates.source import CrudeRates
+from svyrates.rates.source import RateSource
 from svyrates.rates.table import RateTable
 from svyrates.totals import stack_rows
 
@@ -47,7 +47,7 @@ class PairBlock:
     group, versus : labels of each pair
     """
 
-    source: CrudeRates
+    source: RateSource
     sides: Any
     plus: IntArray
     minus: IntArray
@@ -147,6 +147,11 @@ def _kind(rates: RateTable, versus: Any, keys: list[tuple[object, ...]]) -> str:
             raise ComparisonError(
                 f"versus={versus!r} needs groups: give `by` when estimating the rates."
             )
+        if not all(block.source.adds_cells for block in rates.blocks):
+            raise ComparisonError(
+                f"versus={versus!r} needs the totals behind the rates, and this table has rates "
+                "only. Compare its groups with each other, or with a number."
+            )
         return "everyone" if versus is EVERYONE else "else"
     labels = list(dict.fromkeys(keys))
     if any(matches(label, versus) for label in labels):
@@ -195,7 +200,6 @@ def _block(
     source = block.source
     own = source.rows_of(cells)
     k = len(cells)
-    everyone = _everyone(rates, source, members, cells, n_groups)
     if kind == "pairs":
         plus, minus = np.triu_indices(k, 1)
         named = labels
@@ -207,10 +211,11 @@ def _block(
         plus, minus = np.arange(k), np.full(k, -1)
         named = [f"{float(versus):g}"]
     elif kind == "everyone":
-        own = stack_rows([own, everyone])
+        own = stack_rows([own, _everyone(rates, source, members, cells, n_groups)])
         plus, minus = np.arange(k), np.full(k, k)
         named = [*labels, EVERYONE.value]
     else:
+        everyone = _everyone(rates, source, members, cells, n_groups)
         rest = everyone[np.zeros(k, dtype=np.intp)] - own
         own = stack_rows([own, rest])
         plus, minus = np.arange(k), np.arange(k, 2 * k)
@@ -227,7 +232,7 @@ def _block(
 
 
 def _everyone(
-    rates: RateTable, source: CrudeRates, members: list[int], cells: list[int], n_groups: int
+    rates: RateTable, source: RateSource, members: list[int], cells: list[int], n_groups: int
 ) -> Any:
     """The union of the groups compared; with masks, also those who are in none of them."""
     if not rates.overlapping:

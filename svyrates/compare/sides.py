@@ -9,8 +9,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from svyrates.compare.pairs import PairBlock
-from svyrates.rates.estimate import freedom_of
-from svyrates.rates.source import SideRates
+from svyrates.rates.source import SideRates, freedom_of
 from svyrates.totals import ZERO, Linear
 
 __all__ = ["Joint", "read_joint"]
@@ -32,6 +31,7 @@ class Joint:
     certain : (2, pairs) rate exactly 0 or 1
     undefined : (2, pairs) variance undefined for another reason, or side empty
     fixed : the number compared with, if any
+    no_variance : why a variance may be missing, as part of a sentence
     found : rates of the sides, for what needs their spread
     """
 
@@ -45,6 +45,7 @@ class Joint:
     certain: NDArray[np.bool_]
     undefined: NDArray[np.bool_]
     fixed: float | None
+    no_variance: str
     found: SideRates
     plus: IntArray
     minus: IntArray
@@ -112,6 +113,7 @@ def read_joint(block: PairBlock, fixed: float | None, df: str | float) -> Joint:
         certain=both(found.certain.astype(float), 0.0) > 0,
         undefined=both(undefined.astype(float), 0.0) > 0,
         fixed=fixed,
+        no_variance=block.source.no_variance,
         found=found,
         plus=plus,
         minus=minus,

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from svyrates.design import SampleDesign
 from svyrates.errors import DesignWarning, QuestionError, all_faults, some, warn
+from svyrates.rates.crude import CrudeRates
 from svyrates.rates.limits import INTERVALS, Interval, rate_limits
 from svyrates.rates.question import (
     Grouping,
@@ -17,7 +18,7 @@ from svyrates.rates.question import (
     read_outcomes,
     read_where,
 )
-from svyrates.rates.source import CrudeRates, SideRates
+from svyrates.rates.source import variances
 from svyrates.rates.table import Coverage, RateBlock, RateTable
 from svyrates.tally import tally_records, tally_replicates
 from svyrates.totals import CellTotals, ReplicateTotals, UnitTotals
@@ -122,9 +123,8 @@ def estimate_rates(
         levels = [outcomes[position].level for position in positions]
         units = _totals(design, grouping, pattern, levels)
         source = CrudeRates.of(units, design.df)
-        block = RateBlock(positions, source)
-        blocks.append(block)
-        parts.append(_measure(block, grouping, rule))
+        blocks.append(RateBlock(positions, source))
+        parts.append(_measure(source, len(positions), grouping, rule))
     return _assemble(design, outcomes, grouping, coverage, blocks, parts, interval, level, rule)
 
 
@@ -207,13 +207,14 @@ def _in_scope(
     return pattern, Coverage(design.n_records, n_zero, n_outside, n_where_unknown, n_unknown)
 
 
-def _measure(block: RateBlock, grouping: Grouping, df: str | float | None) -> dict[str, FloatArray]:
+def _measure(
+    source: CrudeRates, n_outcomes: int, grouping: Grouping, df: str | float | None
+) -> dict[str, FloatArray]:
     """Everything about the rows of one block but their limits, outcomes slowest."""
-    source = block.source
     n_cells = grouping.membership.shape[1]
     cells = [
         position * n_cells + group
-        for position in range(len(block.outcomes))
+        for position in range(n_outcomes)
         for group in range(grouping.n_groups)
     ]
     found = source.sides(source.rows_of(cells))
@@ -232,31 +233,6 @@ def _measure(block: RateBlock, grouping: Grouping, df: str | float | None) -> di
         "gaps": found.stacked.spread.gaps()[: found.n.size],
         "astray": found.stacked.spread.astray()[: found.n.size],
     }
-
-
-def variances(
-    found: SideRates, source: CrudeRates, df: str | float | None
-) -> tuple[FloatArray, FloatArray]:
-    """Variance of each side's rate, NaN where undefined, and its degrees of freedom."""
-    variance = found.variance()
-    undefined = (found.n == 0) | found.certain | ((variance == 0.0) & (found.units < 2))
-    undefined |= np.isnan(variance)
-    freedom = freedom_of(found, source, df)
-    return np.where(undefined, np.nan, variance), np.where(found.n > 0, freedom, np.nan)
-
-
-def freedom_of(found: SideRates, source: CrudeRates, df: str | float | None) -> FloatArray:
-    """Degrees of freedom of each side's rate under a rule."""
-    m = found.rate.size
-    if df is None or df == "domain":
-        return (found.units - found.strata).astype(np.float64)
-    if df == "scheme":
-        return np.full(m, np.nan if source.scheme_df is None else source.scheme_df)
-    if df == "design":
-        return np.full(m, float(source.design_df))
-    if df == "satterthwaite":
-        return found.stacked.spread.satterthwaite(np.arange(m), np.full(m, -1))
-    return np.full(m, float(df))
 
 
 def _assemble(

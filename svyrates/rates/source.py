@@ -1,34 +1,19 @@
-"""Where a table's rates come from: totals, their spread, and the function that makes rates."""
+"""What a table of rates needs from where its rates come from."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any, Literal, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
-from svyrates.totals import (
-    ZERO,
-    CellTotals,
-    Estimates,
-    RatesOfSides,
-    ReplicateSupport,
-    ReplicateTotals,
-    Spread,
-    Support,
-    UnitSupport,
-    UnitTotals,
-    blocks,
-)
+from svyrates.totals import ZERO, Estimates
 
-__all__ = ["CrudeRates", "SideRates"]
+__all__ = ["RateSource", "SideRates", "SpreadKind", "freedom_of", "variances"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.intp]
-_SMALL_SIDES = 20_000
-
 SpreadKind = Literal["design", "unstratified", "independent-records"]
 
 
@@ -42,6 +27,7 @@ class SideRates:
     rate, unweighted : (m,) weighted and unweighted rates; NaN where empty
     stacked : Estimates of `[rate | unweighted]`, shape (2m,)
     units, strata : (m,) first-stage units and strata with a member
+    own_df : (m,) degrees of freedom that came with the rates; None where they are counted
     """
 
     n: FloatArray
@@ -53,6 +39,7 @@ class SideRates:
     stacked: Estimates
     units: IntArray
     strata: IntArray
+    own_df: FloatArray | None = None
 
     @property
     def nothing(self) -> FloatArray:
@@ -87,91 +74,83 @@ class SideRates:
         return np.asarray((self.n > 0) & ((self.y == 0) | (self.y == self.n)))
 
 
-@dataclass(frozen=True)
-class CrudeRates:
-    """Weighted subgroup rates `p = Y/N` of one block of cells.
-
-    Attributes
-    ----------
-    units : totals of the cells
-    support : where their members sit
-    squared_weights : (cells,) Σw² of the members
-    design_df : units minus strata of the whole design
-    scheme_df : degrees of freedom of the replicates, None without them
-    """
-
-    units: CellTotals
-    support: Support
-    squared_weights: FloatArray
-    design_df: int
-    scheme_df: float | None = None
-
-    @classmethod
-    def of(cls, units: CellTotals, design_df: int) -> CrudeRates:
-        """Prepare the rates of a tally."""
-        squares = units.by_cell(units.tally.ww, answered=True)
-        if isinstance(units, ReplicateTotals):
-            n = np.split(units.totals, 4)[0]
-            return cls(units, ReplicateSupport(n), squares, design_df, units.replicates.df)
-        assert isinstance(units, UnitTotals)  # noqa: S101 - the only other kind there is
-        return cls(units, UnitSupport.of(units), squares, design_df)
+class RateSource(Protocol):
+    """Rates of one block of cells, and of what can be formed from them."""
 
     @property
-    def tells_strata_apart(self) -> bool:
-        """Whether the parts of the design's variance can be told apart."""
-        return isinstance(self.units, UnitTotals)
+    def design_df(self) -> int:
+        """Units minus strata of the whole design."""
+        ...
+
+    @property
+    def scheme_df(self) -> float | None:
+        """Degrees of freedom of the replicates, None without them."""
+        ...
+
+    @property
+    def no_variance(self) -> str:
+        """Why a variance may be missing, as part of a sentence."""
+        ...
 
     @property
     def n_cells(self) -> int:
         """Cells in the block."""
-        return self.units.n_cells
+        ...
+
+    @property
+    def adds_cells(self) -> bool:
+        """Whether the rate of a union of cells is known."""
+        ...
+
+    @property
+    def knows_records(self) -> bool:
+        """Whether the variance of independent records is known."""
+        ...
+
+    @property
+    def tells_strata_apart(self) -> bool:
+        """Whether the parts of the design's variance can be told apart."""
+        ...
 
     def estimates(self, sides: Any, kind: SpreadKind = "design") -> Estimates:
         """Estimates of `[rate | unweighted]` of each row of `sides` (m, cells)."""
-        totals = Estimates(self.units.totals, self._spread(kind))
-        return totals.apply(RatesOfSides(sides))
+        ...
 
     def sides(self, sides: Any) -> SideRates:
         """Rates of each row of `sides` (m, cells), a signed sum of cells."""
-        n, y, weighted_n, _ = (np.asarray(sides @ block) for block in blocks(self.units.totals))
-        # Counts are whole: subtraction leaves them exact, and they decide what is empty or certain.
-        n, y = np.rint(n), np.rint(y)
-        stacked = self.estimates(sides)
-        rate, unweighted = np.split(stacked.values, 2)
-        rate = np.where((n > 0) & (y == 0), 0.0, np.where((n > 0) & (y == n), 1.0, rate))
-        units, strata = self.support.domain(sides)
-        return SideRates(
-            n,
-            y,
-            np.where(n > 0, weighted_n, 0.0),
-            np.asarray(sides @ self.squared_weights),
-            rate,
-            unweighted,
-            stacked,
-            units,
-            strata,
-        )
-
-    def _spread(self, kind: SpreadKind) -> Spread:
-        if kind == "independent-records":
-            return self.units.independent_records
-        if kind == "unstratified" and isinstance(self.units, UnitTotals):
-            return self.units.unstratified
-        # What replicates know of the design cannot be taken apart.
-        return self.units.spread
+        ...
 
     def row(self, cells: dict[int, float]) -> Any:
-        """One side as a sparse row: cell -> sign."""
-        index = np.fromiter(cells, dtype=np.intp)
-        values = np.array(list(cells.values()))
-        return self._rows(np.zeros_like(index), index, values, 1)
+        """One side as a row: cell -> sign."""
+        ...
 
     def rows_of(self, cells: list[int]) -> Any:
         """Sides that are single cells."""
-        index = np.asarray(cells, dtype=np.intp)
-        return self._rows(np.arange(index.size), index, np.ones(index.size), index.size)
+        ...
 
-    def _rows(self, row: IntArray, cell: IntArray, values: FloatArray, n_rows: int) -> Any:
-        matrix = sparse.csr_array((values, (row, cell)), shape=(n_rows, self.n_cells))
-        # The derivatives of sides are eight times as many elements, so sides turn sparse early.
-        return matrix.toarray() if n_rows * self.n_cells <= _SMALL_SIDES else matrix
+
+def variances(
+    found: SideRates, source: RateSource, df: str | float | None
+) -> tuple[FloatArray, FloatArray]:
+    """Variance of each side's rate, NaN where undefined, and its degrees of freedom."""
+    variance = found.variance()
+    undefined = (found.n == 0) | found.certain | ((variance == 0.0) & (found.units < 2))
+    undefined |= np.isnan(variance)
+    freedom = freedom_of(found, source, df)
+    return np.where(undefined, np.nan, variance), np.where(found.n > 0, freedom, np.nan)
+
+
+def freedom_of(found: SideRates, source: RateSource, df: str | float | None) -> FloatArray:
+    """Degrees of freedom of each side's rate under a rule."""
+    m = found.rate.size
+    if found.own_df is not None:
+        return found.own_df
+    if df is None or df == "domain":
+        return (found.units - found.strata).astype(np.float64)
+    if df == "scheme":
+        return np.full(m, np.nan if source.scheme_df is None else source.scheme_df)
+    if df == "design":
+        return np.full(m, float(source.design_df))
+    if df == "satterthwaite":
+        return found.stacked.spread.satterthwaite(np.arange(m), np.full(m, -1))
+    return np.full(m, float(df))

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from svyrates.errors import ComparisonError
 from svyrates.rates.layout import rate_layout
-from svyrates.rates.source import CrudeRates
+from svyrates.rates.source import RateSource
 from svyrates.words import Table, Tabular
 
 __all__ = ["Coverage", "RateBlock", "RateTable"]
@@ -44,7 +44,7 @@ class RateBlock:
     """Outcomes tallied together, and so comparable: positions in the table and their source."""
 
     outcomes: tuple[int, ...]
-    source: CrudeRates
+    source: RateSource
 
 
 @dataclass(frozen=True, repr=False)

@@ -7,7 +7,7 @@ import pytest
 from hypothesis import HealthCheck, assume, given, settings
 
 import svyrates as sr
-from svyrates.rates import source
+from svyrates.rates import crude
 from svyrates.tally import memory
 from svyrates.totals import matrices
 from tests.reference import Survey
@@ -30,7 +30,7 @@ def test_sparse_and_hashed_equal_dense(survey: Survey, monkeypatch: pytest.Monke
     with monkeypatch.context() as patch:
         patch.setattr(matrices, "DENSE_ELEMENTS", -1)
         patch.setattr(matrices, "DENSE_SHARE", 2.0)
-        patch.setattr(source, "_SMALL_SIDES", -1)
+        patch.setattr(crude, "_SMALL_SIDES", -1)
         patch.setattr(memory, "_DENSE_CELLS", -1)
         frugal = ask()
         sparse_covariance = frugal.covariance.to_numpy()
