@@ -213,9 +213,10 @@ def test_every_layout_in_memory(kind: str) -> None:
     """More records than a chunk; blocks are read in place, other columns chunk by chunk."""
     rng = np.random.default_rng(6)
     n, names = 9_000, [f"rw_{i}" for i in range(20)]
-    data = pd.DataFrame({name: rng.uniform(0.5, 3.0, n).astype(np.float32) for name in names})
+    w = rng.uniform(0.5, 3.0, n)
+    data = pd.DataFrame({x: (w * rng.uniform(0.5, 1.5, n)).astype(np.float32) for x in names})
     data = data.astype(np.float64)
-    data["w"], data["y"] = rng.uniform(0.5, 3.0, n), rng.integers(0, 2, n)
+    data["w"], data["y"] = w, rng.integers(0, 2, n)
     data["g"] = rng.choice(["a", "b"], n)
     weights = sr.ReplicateWeights("rw_*", "bootstrap")
 
