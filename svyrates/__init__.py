@@ -10,7 +10,21 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from svyrates.compare import EVERYONE, EVERYONE_ELSE, ComparisonTable, compare_rates
+    from svyrates.compare import (
+        EVERYONE,
+        EVERYONE_ELSE,
+        ComparisonTable,
+        ContrastTable,
+        DecompositionTable,
+        HomogeneityTable,
+        common_difference,
+        compare_rates,
+        contrast,
+        difference_in_differences,
+        gap_decomposition,
+        homogeneity_test,
+        trend_test,
+    )
     from svyrates.demo import demo_survey
     from svyrates.design import (
         DesignSummary,
@@ -29,7 +43,7 @@ if TYPE_CHECKING:
         RatesWarning,
         SimpleFormulaWarning,
     )
-    from svyrates.rates import RateTable, estimate_rates
+    from svyrates.rates import RateTable, estimate_rates, rates_from_published
 
 __version__ = "0.1.0"
 
@@ -38,10 +52,13 @@ __all__ = [
     "EVERYONE_ELSE",
     "ComparisonError",
     "ComparisonTable",
+    "ContrastTable",
+    "DecompositionTable",
     "DataFileError",
     "DesignError",
     "DesignSummary",
     "DesignWarning",
+    "HomogeneityTable",
     "QuestionError",
     "RateTable",
     "RatesError",
@@ -49,15 +66,36 @@ __all__ = [
     "ReplicateWeights",
     "SampleDesign",
     "SimpleFormulaWarning",
+    "common_difference",
     "compare_rates",
+    "contrast",
     "demo_survey",
+    "difference_in_differences",
     "estimate_rates",
+    "gap_decomposition",
+    "homogeneity_test",
     "make_replicates",
     "merge_replicates",
+    "rates_from_published",
+    "trend_test",
 ]
 
 _HOMES = {
-    "svyrates.compare": ("EVERYONE", "EVERYONE_ELSE", "ComparisonTable", "compare_rates"),
+    "svyrates.compare": (
+        "EVERYONE",
+        "EVERYONE_ELSE",
+        "ComparisonTable",
+        "ContrastTable",
+        "DecompositionTable",
+        "HomogeneityTable",
+        "common_difference",
+        "compare_rates",
+        "contrast",
+        "difference_in_differences",
+        "gap_decomposition",
+        "homogeneity_test",
+        "trend_test",
+    ),
     "svyrates.demo": ("demo_survey",),
     "svyrates.design": (
         "DesignSummary",
@@ -76,7 +114,7 @@ _HOMES = {
         "RatesWarning",
         "SimpleFormulaWarning",
     ),
-    "svyrates.rates": ("RateTable", "estimate_rates"),
+    "svyrates.rates": ("RateTable", "estimate_rates", "rates_from_published"),
 }
 _HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 

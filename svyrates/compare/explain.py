@@ -7,10 +7,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from svyrates.compare.conclusions import finding
+from svyrates.compare.measures import MEASURES
 from svyrates.compare.sources import STEPS, step_ratios
-from svyrates.compare.verdict import MEANINGS, MISLEADING
+from svyrates.compare.verdict import MISLEADING, meaning
 from svyrates.errors import SimpleFormulaWarning, warn
-from svyrates.words import fixed, join_words, p_value, percent, plural, points
+from svyrates.words import fixed, join_words, p_phrase, percent, plural, points
 
 if TYPE_CHECKING:
     from svyrates.compare.table import ComparisonTable
@@ -36,8 +38,9 @@ def paragraph(table: ComparisonTable, row: int) -> str:
     """One comparison as a short paragraph."""
     parts = [
         _answer(table, row),
+        _together(table, row),
         _simple_claim(table, row),
-        f"Verdict: {table.verdict[row]} ({MEANINGS[table.verdict[row]]}).",
+        f"Verdict: {table.verdict[row]} ({meaning(table.verdict[row], _finding(table))}).",
         _behaviour(table, row),
         _why(table, row, step_ratios(table.only([row]))[:, 0]),
     ]
@@ -74,7 +77,8 @@ def warn_if_misleading(table: ComparisonTable) -> None:
 
 
 def _bullet(table: ComparisonTable, row: int, steps: FloatArray) -> str:
-    verdict = f"{table.title_of(row)}: {table.verdict[row]} ({MEANINGS[table.verdict[row]]})."
+    said = meaning(table.verdict[row], _finding(table))
+    verdict = f"{table.title_of(row)}: {table.verdict[row]} ({said})."
     parts = (verdict, _simple_claim(table, row), _answer(table, row), _why(table, row, steps))
     return "- " + " ".join(part for part in parts if part)
 
@@ -85,61 +89,74 @@ def _distance(table: ComparisonTable, row: int) -> float:
 
 
 def _amount(table: ComparisonTable, value: float) -> str:
-    return points(value) if table.measure == "difference" else fixed(value, 2)
+    return MEASURES[table.measure].show(value)
+
+
+def _finding(table: ComparisonTable) -> str:
+    return "".join(finding(table.alternative, table.null, MEASURES[table.measure].unity))
 
 
 def _range(table: ComparisonTable, low: float, high: float) -> str:
-    level = f"{100 * table.level:g}% limits"
+    level = f"{100 * table.limits_level:g}% limits"
     if np.isnan(low):
         return f"no {level}"
-    if table.alternative == "less":
+    if table.alternative in ("less", "not-higher"):
         return f"{level}: at most {_amount(table, high)}"
-    if table.alternative == "greater":
+    if table.alternative in ("greater", "not-lower"):
         return f"{level}: at least {_amount(table, low)}"
-    if table.measure == "difference":
-        low_text = points(low).removesuffix(" points")
-        return f"{level} {low_text} to {points(high)}"
-    return f"{level} {fixed(low, 2)} to {fixed(high, 2)}"
-
-
-def _p(value: float) -> str:
-    text = p_value(value)
-    return f"p {text[0]} {text[1:]}" if text[:1] in "<>" else f"p = {text}"
+    return f"{level} {_amount(table, low).removesuffix(' points')} to {_amount(table, high)}"
 
 
 def _answer(table: ComparisonTable, row: int) -> str:
     """What the design says."""
-    name = {"difference": "difference", "ratio": "ratio", "odds_ratio": "odds ratio"}[table.measure]
+    name = MEASURES[table.measure].name
     rates = f"{percent(table.rate[row])} against {percent(table.versus_rate[row])}"
     if np.isnan(table.p[row]):
         return f"The design gives {rates}; {_amount(table, table.estimate[row])}, without a test."
-    evidence = (
-        f"evidence of a {_departure(table)}"
-        if table.p[row] < 1.0 - table.level
-        else f"no evidence of a {_departure(table)}"
-    )
+    found = table.p[row] < 1.0 - table.level
+    evidence = f"{'' if found else 'no '}evidence of {_finding(table)}"
+    limits = _range(table, table.low[row], table.high[row])
     df = f" on {table.df[row]:g} df" if np.isfinite(table.df[row]) else ""
     t = f"t = {table.statistic[row]:.2f}{df}, " if np.isfinite(table.statistic[row]) else ""
     return (
         f"The design gives {rates}: a {name} of {_amount(table, table.estimate[row])} "
-        f"({_range(table, table.low[row], table.high[row])}; {t}{_p(table.p[row])}), {evidence}."
+        f"({limits}; {t}{p_phrase(table.p[row])}), {evidence}."
     )
 
 
-def _departure(table: ComparisonTable) -> str:
-    usual = table.null == (0.0 if table.measure == "difference" else 1.0)
-    return "difference" if usual else f"departure from {table.null:g}"
+def _together(table: ComparisonTable, row: int) -> str:
+    """What the margin, or the number of comparisons, adds."""
+    if np.isnan(table.p[row]):
+        return ""
+    sentences = []
+    if table.margin is not None:
+        low, high = (_amount(table, end) for end in table.margin)
+        asked = {
+            "equivalent": f"The margin is {low.removesuffix(' points')} to {high}",
+            "not-lower": f"The margin is {low}",
+            "not-higher": f"The margin is {high}",
+        }[table.alternative]
+        sentences.append(f"{asked}; conclusion: {table.conclusion[row]}.")
+    if table.multiplicity != "none":
+        sentences.append(
+            f"Adjusted for the comparisons of its family ({table.multiplicity}): "
+            f"{p_phrase(table.p_adjusted[row])}, {table.conclusion[row]}."
+        )
+    return " ".join(sentences)
 
 
 def _simple_claim(table: ComparisonTable, row: int) -> str:
     """What the simple formula says."""
     if np.isnan(table.simple_p[row]):
         return "The simple formula gives no test."
-    found = "finds a" if table.simple_p[row] < 1.0 - table.level else "finds no"
+    article, noun = finding(table.alternative, table.null, MEASURES[table.measure].unity)
+    found = f"finds {article}{noun}"
+    if not table.simple_p[row] < 1.0 - table.level:
+        found = f"finds no {noun}"
     return (
         f"The simple formula claims {_amount(table, table.simple_estimate[row])} "
         f"({_range(table, table.simple_low[row], table.simple_high[row])}; "
-        f"{_p(table.simple_p[row])}) and {found} {_departure(table)}."
+        f"{p_phrase(table.simple_p[row])}) and {found}."
     )
 
 
@@ -148,13 +165,17 @@ def _behaviour(table: ComparisonTable, row: int) -> str:
     if np.isnan(table.simple_coverage[row]):
         return ""
     alpha = f"{100 * (1 - table.level):g}%"
+    scale = MEASURES[table.measure]
     text = (
-        f"Under this design its {100 * table.level:g}% interval holds the weighted "
-        f"{table.measure.replace('_', ' ')} in {percent(table.simple_coverage[row], 0)} of samples"
+        f"Under this design its {100 * table.limits_level:g}% interval holds the weighted "
+        f"{scale.name} in {percent(table.simple_coverage[row], 0)} of samples"
     )
     if not np.isnan(table.simple_error_rate[row]):
+        truth = "were the two population rates equal"
+        if table.margin is not None or table.null != scale.unity:
+            truth = "were the truth just at the limit that is tested"
         text += (
-            f", and were the two population rates equal its {alpha} test would reject in "
+            f", and {truth} its {alpha} test would reject in "
             f"{percent(table.simple_error_rate[row], 0)}"
         )
     return text + "."
@@ -180,8 +201,10 @@ def _why(table: ComparisonTable, row: int, steps: FloatArray) -> str:
     if table.shift_p[row] < 1.0 - table.level:
         by = (
             points(table.shift[row])
-            if table.measure == "difference"
+            if not MEASURES[table.measure].is_log
             else (f"a factor of {fixed(float(np.exp(table.shift[row])), 2)}")
         )
-        sentences.append(f"Leaving the weights out shifts it by {by} ({_p(table.shift_p[row])}).")
+        sentences.append(
+            f"Leaving the weights out shifts it by {by} ({p_phrase(table.shift_p[row])})."
+        )
     return " ".join(sentences)

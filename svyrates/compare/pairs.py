@@ -15,7 +15,16 @@ from svyrates.rates.source import RateSource
 from svyrates.rates.table import RateTable
 from svyrates.totals import stack_rows
 
-__all__ = ["EVERYONE", "EVERYONE_ELSE", "PairBlock", "Reference", "plan_pairs"]
+__all__ = [
+    "EVERYONE",
+    "EVERYONE_ELSE",
+    "PairBlock",
+    "Reference",
+    "by_level",
+    "held_columns",
+    "matches",
+    "plan_pairs",
+]
 
 IntArray = NDArray[np.intp]
 
@@ -83,7 +92,7 @@ def plan_pairs(
     fixed : the number compared with, if it is one
     """
     names, rows = _labels(rates)
-    held = _held(rates, names, within)
+    held = held_columns(rates, names, within)
     varying = [name for name in names if name not in held]
     columns = [names.index(name) for name in varying]
     keys = [tuple(row[column] for column in columns) for row in rows]
@@ -93,7 +102,7 @@ def plan_pairs(
             f"versus={versus!r} compares groups of people; hold the outcome fixed with `within`."
         )
     blocks = []
-    for level, members in _by_level(names, rows, held).items():
+    for level, members in by_level(names, rows, held).items():
         labels = [" / ".join(map(str, keys[row])) or "all" for row in members]
         reference = [i for i, row in enumerate(members) if matches(keys[row], versus)]
         blocks.append(_block(rates, members, labels, level, kind, reference, versus))
@@ -111,7 +120,9 @@ def _labels(rates: RateTable) -> tuple[list[str], list[tuple[object, ...]]]:
     return ["outcome", *rates.columns], rows
 
 
-def _held(rates: RateTable, names: list[str], within: Sequence[str] | str | None) -> list[str]:
+def held_columns(
+    rates: RateTable, names: list[str], within: Sequence[str] | str | None
+) -> list[str]:
     """Columns held fixed: all but the last unless told otherwise."""
     together = len(rates.blocks) == 1 and len(rates.outcomes) > 1
     if within is None:
@@ -128,9 +139,10 @@ def _held(rates: RateTable, names: list[str], within: Sequence[str] | str | None
     return [name for name in names if name in asked]
 
 
-def _by_level(
+def by_level(
     names: list[str], rows: list[tuple[object, ...]], held: list[str]
 ) -> dict[tuple[object, ...], list[int]]:
+    """Rows of each level of the columns held fixed."""
     found: dict[tuple[object, ...], list[int]] = {}
     positions = [names.index(name) for name in held]
     for row, labels in enumerate(rows):

@@ -8,13 +8,17 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from svyrates.compare.conclusions import conclusions
 from svyrates.compare.explain import warn_if_misleading
+from svyrates.compare.families import Family, Tests, adjusted
+from svyrates.compare.hypothesis import Alternative, Hypothesis, read_hypothesis, two_sided
 from svyrates.compare.measures import MEASURES, Measure, Scale
+from svyrates.compare.multiplicity import MULTIPLICITY, Multiplicity
 from svyrates.compare.notes import comparison_notes
 from svyrates.compare.pairs import PairBlock, plan_pairs
 from svyrates.compare.recovered import SideLimits, recover, touching_level
 from svyrates.compare.sides import Joint, read_joint
-from svyrates.compare.simple import VARIANTS, SimpleVariant, sided, simple_formula, two_sided
+from svyrates.compare.simple import VARIANTS, SimpleVariant, simple_formula
 from svyrates.compare.table import ComparisonTable
 from svyrates.compare.verdict import judge
 from svyrates.errors import ComparisonError, all_faults, some
@@ -24,7 +28,6 @@ from svyrates.rates.table import RateTable
 __all__ = ["compare_rates"]
 
 FloatArray = NDArray[np.float64]
-Alternative = Literal["two-sided", "greater", "less"]
 LimitsMethod = Literal["linear", "recovered"]
 
 
@@ -36,7 +39,11 @@ def compare_rates(
     measure: Measure = "difference",
     alternative: Alternative = "two-sided",
     null: float | None = None,
+    margin: float | tuple[float, float] | None = None,
     limits: LimitsMethod = "linear",
+    multiplicity: Multiplicity = "none",
+    family: Family = "level",
+    seed: int = 1,
     simple: SimpleVariant = "unweighted",
     level: float | None = None,
 ) -> ComparisonTable:
@@ -52,16 +59,31 @@ def compare_rates(
     within : str or list of str, optional
         Columns held fixed: groups are compared within their levels. By default all grouping
         columns but the last. ``[]`` compares across all of them.
-    measure : {"difference", "ratio", "odds_ratio"}
-        Difference in proportions, ratio of proportions, or odds ratio; the two ratios are tested
-        and their limits formed on the log scale.
-    alternative : {"two-sided", "greater", "less"}
-        "greater": the group's rate exceeds that of `versus`.
+    measure : {"difference", "ratio", "odds_ratio", "relative_difference"}
+        Difference in proportions, ratio of proportions, odds ratio, or ratio less one; all but the
+        first are tested and their limits formed on the log scale.
+    alternative : str
+        ``"two-sided"``; ``"greater"`` or ``"less"`` than `versus`; ``"equivalent"`` within a margin
+        (two one-sided tests, limits at 1 - 2α); ``"not-lower"`` or ``"not-higher"`` than `versus`
+        by a margin (non-inferiority where a high, or a low, rate is good).
     null : float, optional
         Value of the measure under the null hypothesis; equal rates by default.
+    margin : float or (float, float), optional
+        For the last three alternatives: 0.05 is 5 percentage points either way; for a ratio 1.25 is
+        from 1/1.25 to 1.25.
     limits : {"linear", "recovered"}
         Linear (Wald) limits, or limits recovered from the two groups' own limits, better near 0
         and 1 and in small groups. The p-value stays that of the t test.
+    multiplicity : str
+        ``"none"``, ``"bonferroni"``, ``"sidak"``, ``"holm"``, ``"hochberg"``,
+        ``"benjamini-hochberg"``, ``"benjamini-yekutieli"``, or ``"max-t"``, which uses the
+        correlations of the rates. Adjusted p-values, and for Bonferroni, Šidák and max-t also
+        simultaneous limits, stand beside the others.
+    family : {"level", "table"}
+        Which comparisons are adjusted together: those within one level of the columns held fixed,
+        or all of the table.
+    seed : int
+        Seed of the draws behind "max-t".
     simple : {"unweighted", "weighted", "weights-as-counts", "kish"}
         What goes into the simple formula: unweighted rates and counts; weighted rates with the
         unweighted n, with the sum of weights as n, or with Kish's effective n.
@@ -112,23 +134,41 @@ def compare_rates(
             "estimate_rates(design, ...)."
         )
     level = rates.level if level is None else level
-    _check(measure, alternative, null, limits, simple, level)
+    asked = _check(
+        measure, alternative, null, margin, level, (limits, simple, multiplicity, family)
+    )
     held, blocks, fixed = plan_pairs(rates, versus, within)
     scale = MEASURES[measure]
-    null_value = scale.unity if null is None else float(null)
-    on_scale = float(np.log(null_value)) if _is_log(measure) else null_value
-    settings = (measure, alternative, on_scale, limits, simple, level)
-    parts = [_compare_block(rates, block, fixed, settings) for block in blocks]
+    settings = (measure, asked, limits, simple)
+    parts, tests = [], []
+    for block in blocks:
+        part, found = _compare_block(rates, block, fixed, settings)
+        parts.append(part)
+        tests.append(found)
     joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    many = adjusted(tests, asked, multiplicity, family, seed)
+    low, high = (scale.back(many.low), scale.back(many.high))
+    certain = np.isnan(joined["estimate"])
     table = ComparisonTable(
         held=held,
         levels=tuple(block.level for block in blocks for _ in block.group),
         group=tuple(label for block in blocks for label in block.group),
         versus=tuple(label for block in blocks for label in block.versus),
+        p_adjusted=many.p,
+        simultaneous_low=np.where(certain, np.nan, low),
+        simultaneous_high=np.where(certain, np.nan, high),
+        conclusion=conclusions(asked, alternative, many.p, many.equality_p),
         measure=measure,
         alternative=alternative,
-        null=null_value,
+        null=float(scale.back(np.asarray(asked.null))),
+        margin=(
+            (float(scale.back(np.asarray(asked.low))), float(scale.back(np.asarray(asked.high))))
+            if margin is not None
+            else None
+        ),
         limits=limits,
+        multiplicity=multiplicity,
+        family=family,
         variant=simple,
         level=level,
         fixed=fixed,
@@ -140,45 +180,33 @@ def compare_rates(
     return table
 
 
-def _is_log(measure: str) -> bool:
-    return measure != "difference"
-
-
 def _check(
-    measure: str, alternative: str, null: float | None, limits: str, simple: str, level: float
-) -> None:
+    measure: str, alternative: str, null: Any, margin: Any, level: Any, options: tuple[str, ...]
+) -> Hypothesis:
     faults: list[str] = []
-    for name, value, allowed in (
-        ("measure", measure, tuple(MEASURES)),
-        ("alternative", alternative, ("two-sided", "greater", "less")),
-        ("limits", limits, ("linear", "recovered")),
-        ("simple", simple, VARIANTS),
+    asked = read_hypothesis(measure, alternative, null, margin, level, faults)
+    for name, value, allowed in zip(
+        ("limits", "simple", "multiplicity", "family"),
+        options,
+        (("linear", "recovered"), VARIANTS, MULTIPLICITY, ("level", "table")),
+        strict=True,
     ):
         if value not in allowed:
-            faults.append(f"{name} must be one of {some(allowed)}; got {value!r}.")
-    if isinstance(level, bool) or not isinstance(level, int | float) or not 0.0 < level < 1.0:
-        faults.append(f"level must be a number between 0 and 1, such as 0.95; got {level!r}.")
-    elif alternative != "two-sided" and level <= 0.5:
-        faults.append(f"a one-sided question needs a level above 0.5; got {level!r}.")
-    if null is not None:
-        low = -1.0 if measure == "difference" else 0.0
-        high = 1.0 if measure == "difference" else np.inf
-        number = isinstance(null, int | float | np.number) and not isinstance(null, bool)
-        if not number or not low < float(null) < high:
-            faults.append(
-                f"null must be a number between {low:g} and {high:g} for the {measure}; got "
-                f"{null!r}."
-            )
+            faults.append(f"{name} must be one of {some(allowed, 8)}; got {value!r}.")
+    if alternative == "equivalent" and options[2] == "max-t":
+        faults.append("multiplicity='max-t' is for one test each; for equivalence take 'holm'.")
     all_faults(ComparisonError, "The comparison has", faults)
+    assert asked is not None  # noqa: S101 - without faults it has been read
+    return asked
 
 
 def _compare_block(
     rates: RateTable,
     block: PairBlock,
     fixed: float | None,
-    settings: tuple[str, str, float, str, str, float],
-) -> dict[str, NDArray[Any]]:
-    measure, alternative, null, limits, variant, level = settings
+    settings: tuple[str, Hypothesis, str, str],
+) -> tuple[dict[str, NDArray[Any]], Tests]:
+    measure, asked, limits, variant = settings
     scale = MEASURES[measure]
     joint = read_joint(block, fixed, rates.df_rule)
     weighted = joint.values[:2]
@@ -190,27 +218,27 @@ def _compare_block(
     df = _freedom(rates, joint, scale)
     with np.errstate(invalid="ignore", divide="ignore"):
         se = np.sqrt(variance)
-        statistic = np.where(variance > 0, (estimate - null) / se, np.nan)
         correlation = joint.cov[0, 1] / np.sqrt(joint.cov[0, 0] * joint.cov[1, 1])
+    statistic, p = asked.test(estimate, se, df)
+    statistic = np.where(np.isnan(p) & ~(df > 0), _ratio(estimate - asked.low, se), statistic)
     usable = ~np.isnan(variance) & (fixed is None)
     correlation = np.where(usable, np.clip(correlation, -1.0, 1.0), np.nan)
-    p = _p_value(statistic, df, alternative)
-    side_level = level if alternative == "two-sided" else 2.0 * level - 1.0
-    low, high = _limits(joint, rates, scale, estimate, se, df, correlation, limits, side_level)
-    if measure == "difference":
-        p = _where_certain(joint, rates, scale, p, null, alternative)
-    low, high = sided(low, high, alternative)
-    found = simple_formula(
-        joint, measure, variant, alternative, null, level, df, rates.weights_are_relative
-    )
-    verdict = judge(estimate, variance, p, found, df, null, level)
+
+    def limits_at(level: float) -> tuple[FloatArray, FloatArray]:
+        return _limits(joint, rates, scale, estimate, se, df, correlation, limits, level)
+
+    if not scale.is_log:
+        p = _where_certain(joint, rates, scale, p, asked)
+    low, high = asked.limits(*limits_at(asked.pointwise))
+    found = simple_formula(joint, measure, variant, asked, df, rates.weights_are_relative)
+    verdict = judge(estimate, variance, p, found, df, asked)
     with np.errstate(invalid="ignore", divide="ignore"):
         variance_ratio = variance / found.se**2
         back = scale.back(np.stack((estimate, low, high)))
     certain = joint.certain.any(axis=0)
-    if _is_log(measure):
+    if scale.is_log:
         back = np.where(certain, np.nan, back)
-    return {
+    part = {
         "rate": weighted[0],
         "versus_rate": weighted[1],
         "estimate": back[0],
@@ -234,6 +262,26 @@ def _compare_block(
         "verdict": verdict,
         "note": comparison_notes(joint, found, df, se, measure, limits),
     }
+    m = joint.found.rate.size
+    side_slope = scale.slope(joint.found.rate)
+    side_slope = np.where(np.isfinite(side_slope), side_slope, 0.0)
+    tests = Tests(
+        p=p,
+        equality_p=two_sided(_ratio(estimate, se), df),
+        se=se,
+        df=df,
+        covariance=lambda: (
+            np.nan_to_num(joint.found.covariance()[:m, :m]) * np.outer(side_slope, side_slope)
+        ),
+        contrasts=(block.plus, block.minus),
+        limits_at=limits_at,
+    )
+    return part, tests
+
+
+def _ratio(above: FloatArray, below: FloatArray) -> FloatArray:
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.where(below > 0, above / below, np.nan)
 
 
 def _freedom(rates: RateTable, joint: Joint, scale: Scale) -> FloatArray:
@@ -242,14 +290,6 @@ def _freedom(rates: RateTable, joint: Joint, scale: Scale) -> FloatArray:
         return np.asarray(np.fmin(joint.side_df[0], joint.side_df[1]))
     slope = scale.slope(joint.found.rate)
     return joint.satterthwaite(slope)
-
-
-def _p_value(statistic: FloatArray, df: FloatArray, alternative: str) -> FloatArray:
-    both = two_sided(statistic, df)
-    if alternative == "two-sided":
-        return both
-    toward = statistic > 0 if alternative == "greater" else statistic < 0
-    return np.where(np.isnan(both), np.nan, np.where(toward, both / 2.0, 1.0 - both / 2.0))
 
 
 def _side_limits(joint: Joint, rates: RateTable, scale: Scale) -> SideLimits:
@@ -291,12 +331,7 @@ def _limits(
 
 
 def _where_certain(
-    joint: Joint,
-    rates: RateTable,
-    scale: Scale,
-    p: FloatArray,
-    null: float,
-    alternative: str,
+    joint: Joint, rates: RateTable, scale: Scale, p: FloatArray, asked: Hypothesis
 ) -> FloatArray:
     """Where a rate is exactly 0 or 1: the level at which the recovered limits touch the null."""
     rows = np.flatnonzero(joint.certain.any(axis=0) & ~joint.undefined.any(axis=0))
@@ -306,9 +341,13 @@ def _where_certain(
     p = p.copy()
     for row in rows:
         first, second = float(joint.values[0, row]), float(joint.values[1, row])
-        level = touching_level(sides, int(row), 0.0, null, first, second)
         d = first - second
-        toward = {"two-sided": True, "greater": d > null, "less": d < null}[alternative]
-        one_sided = level / 2.0 if toward else 1.0 - level / 2.0
-        p[row] = level if alternative == "two-sided" else one_sided
+
+        def beyond(null: float, toward: bool, row: int = int(row)) -> float:
+            level = touching_level(sides, row, 0.0, null, first, second)  # noqa: B023
+            return level / 2.0 if toward else 1.0 - level / 2.0
+
+        over = beyond(asked.low, d > asked.low)
+        under = beyond(asked.high, d < asked.high)
+        p[row] = asked.p_of_ends(over, under)
     return p

@@ -13,10 +13,20 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
+from svyrates.compare.hypothesis import Hypothesis, normal_df, two_sided
 from svyrates.compare.measures import MEASURES, Scale
 from svyrates.compare.sides import Joint
 
-__all__ = ["VARIANTS", "SimpleFormula", "SimpleVariant", "simple_formula", "two_sided"]
+__all__ = [
+    "VARIANTS",
+    "SimpleFormula",
+    "SimpleVariant",
+    "counted_shift",
+    "ingredients",
+    "real_coverage",
+    "real_error_rate",
+    "simple_formula",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -61,40 +71,40 @@ class SimpleFormula:
 
 
 @dataclass(frozen=True, slots=True)
-class _Ingredients:
+class Ingredients:
+    """What goes into the simple formula: rates and sizes, and whether they are the raw ones."""
+
     rate: FloatArray
     n: FloatArray
     unweighted: bool
 
 
-def _ingredients(joint: Joint, variant: str) -> _Ingredients:
-    if variant == "unweighted":
-        return _Ingredients(joint.values[2:], joint.n, True)
+def ingredients(
+    variant: str,
+    weighted: FloatArray,
+    plain: FloatArray,
+    n: FloatArray,
+    weighted_n: FloatArray,
+    kish: FloatArray,
+) -> Ingredients:
+    """Rates and sizes of a variant, all of the same shape."""
+    # Published rates come without unweighted ones; their readers put in what there is.
+    if variant == "unweighted" and not np.isnan(plain).all():
+        return Ingredients(plain, n, True)
     sizes = {
-        "weighted": joint.n,
-        "weights-as-counts": joint.weighted_n,
-        "kish": joint.n / joint.kish,
+        "unweighted": n,
+        "weighted": n,
+        "weights-as-counts": weighted_n,
+        "kish": n / kish,
     }
-    return _Ingredients(joint.values[:2], sizes[variant], False)
-
-
-def two_sided(statistic: FloatArray, df: FloatArray) -> FloatArray:
-    """Two-sided p-value of Student's t; the normal's at infinite df, NaN without df."""
-    size = -np.abs(statistic)
-    with np.errstate(invalid="ignore"):
-        usable = df > 0
-    tail = special.stdtr(np.where(usable & np.isfinite(df), df, 1.0), size)
-    tail = np.where(np.isinf(df), special.ndtr(size), tail)
-    return np.where(usable, np.minimum(2.0 * tail, 1.0), np.nan)
+    return Ingredients(weighted, sizes[variant], False)
 
 
 def simple_formula(
     joint: Joint,
     measure: str,
     variant: str,
-    alternative: str,
-    null: float,
-    level: float,
+    asked: Hypothesis,
     df: FloatArray,
     weights_are_relative: bool,
 ) -> SimpleFormula:
@@ -103,33 +113,32 @@ def simple_formula(
     Parameters
     ----------
     joint : both sides of every pair
-    measure, variant, alternative : as in `compare_rates`
-    null : null value on the measure's scale
-    level : confidence level
+    measure, variant : as in `compare_rates`
+    asked : the test's question
     df : (pairs,) degrees of freedom of the design-based comparison
     weights_are_relative : whether the population is unknown
     """
     scale = MEASURES[measure]
-    used = _ingredients(joint, variant)
+    used = ingredients(
+        variant, joint.values[:2], joint.values[2:], joint.n, joint.weighted_n, joint.kish
+    )
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         on_scale = scale.forward(used.rate[0]) - scale.forward(used.rate[1])
         pooled_se, se = _standard_errors(used, joint.fixed, scale)
-        usual = null == 0.0
-        in_points = used.rate[0] - used.rate[1]
-        statistic = in_points / pooled_se if usual else (on_scale - null) / se
-        statistic = np.where(np.isfinite(statistic), statistic, np.nan)
-        p = normal_tail(statistic, alternative)
-        z = special.ndtri(0.5 + level / 2.0) if alternative == "two-sided" else special.ndtri(level)
-        low, high = sided(on_scale - z * se, on_scale + z * se, alternative)
-    shift, shift_p, b, s_u = _shift(joint, scale, used, level, df)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        if usual:
-            _, _, b_points, _ = _shift(joint, MEASURES["difference"], used, level, df)
-            s_null = _null_deviation(joint, used)
-            error_rate = _rejection(z, pooled_se, b_points, s_null, alternative)
+        if asked.is_equality:
+            _, p = asked.test(used.rate[0] - used.rate[1], pooled_se, normal_df(se))
         else:
-            error_rate = _rejection(z, se, b, s_u, alternative)
-        coverage = _coverage(z, se, b, s_u, alternative)
+            _, p = asked.test(on_scale, se, normal_df(se))
+        low, high = asked.limits(on_scale - asked.z * se, on_scale + asked.z * se)
+    shift, shift_p, b, s_u = _shift(joint, scale, used, asked.level, df)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        if asked.is_equality:
+            _, _, b_points, _ = _shift(joint, MEASURES["difference"], used, asked.level, df)
+            s_null = _null_deviation(joint, used)
+            error_rate = real_error_rate(asked, pooled_se, b_points, s_null)
+        else:
+            error_rate = real_error_rate(asked, se, b, s_u)
+        coverage = real_coverage(asked, se, b, s_u)
     few, large = _conditions(joint, weights_are_relative)
     return SimpleFormula(
         scale.back(on_scale), se, scale.back(low), scale.back(high), p, on_scale,
@@ -147,25 +156,8 @@ def _conditions(joint: Joint, weights_are_relative: bool) -> tuple[BoolArray, Bo
     return np.asarray(few), np.asarray(large & (not weights_are_relative))
 
 
-def normal_tail(statistic: FloatArray, alternative: str) -> FloatArray:
-    """p-value of a standard normal statistic."""
-    if alternative == "two-sided":
-        return np.asarray(np.minimum(2.0 * special.ndtr(-np.abs(statistic)), 1.0))
-    return np.asarray(special.ndtr(-statistic if alternative == "greater" else statistic))
-
-
-def sided(low: FloatArray, high: FloatArray, alternative: str) -> tuple[FloatArray, FloatArray]:
-    """Open the side of the limits that a one-sided question does not ask about."""
-    defined = np.isfinite(low) & np.isfinite(high)
-    if alternative == "greater":
-        return low, np.where(defined, np.inf, np.nan)
-    if alternative == "less":
-        return np.where(defined, -np.inf, np.nan), high
-    return low, high
-
-
 def _standard_errors(
-    used: _Ingredients, fixed: float | None, scale: Scale
+    used: Ingredients, fixed: float | None, scale: Scale
 ) -> tuple[FloatArray, FloatArray]:
     """Pooled (or null) standard error of the difference, and unpooled one on the scale."""
     rate, n = used.rate, used.n
@@ -184,7 +176,7 @@ def pooled_rate(rate: FloatArray, n: FloatArray) -> FloatArray:
 
 
 def _shift(
-    joint: Joint, scale: Scale, used: _Ingredients, level: float, df: FloatArray
+    joint: Joint, scale: Scale, used: Ingredients, level: float, df: FloatArray
 ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Shift, its p-value, the bias counted (with its sign) and the true standard deviation.
 
@@ -205,6 +197,14 @@ def _shift(
         return np.where(undefined, np.nan, 0.0), np.full_like(s_u, np.nan), nothing, s_u
     s_u = np.sqrt(joint.contrast_variance(of_u))
     variance = joint.contrast_variance(of_u - of_p)
+    shift, shift_p, b = counted_shift(plain, weighted, variance, level, df)
+    return shift, shift_p, b, s_u
+
+
+def counted_shift(
+    plain: FloatArray, weighted: FloatArray, variance: FloatArray, level: float, df: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Shift `plain - weighted`, its p-value, and the bias that counts, with its sign."""
     with np.errstate(invalid="ignore", divide="ignore"):
         shift = plain - weighted
         # Rounding alone separates the two where all weights are equal.
@@ -213,10 +213,10 @@ def _shift(
     shift_p = np.where(np.isfinite(statistic), two_sided(statistic, df), np.nan)
     counted = shift_p < 1.0 - level
     b = np.where(counted, np.sqrt(np.maximum(shift**2 - variance, 0.0)), 0.0)
-    return shift, shift_p, np.copysign(b, shift), s_u
+    return shift, shift_p, np.copysign(b, shift)
 
 
-def _null_deviation(joint: Joint, used: _Ingredients) -> FloatArray:
+def _null_deviation(joint: Joint, used: Ingredients) -> FloatArray:
     """`S_0`: the true standard deviation of the difference, were the two rates made equal."""
     rate = used.rate
     if joint.fixed is None:
@@ -233,23 +233,40 @@ def _null_deviation(joint: Joint, used: _Ingredients) -> FloatArray:
     return np.where(certain, np.nan, np.sqrt(variance))
 
 
-def _rejection(
-    z: float, se: FloatArray, b: FloatArray, s_null: FloatArray, alternative: str
+def real_error_rate(
+    asked: Hypothesis, se: FloatArray, b: FloatArray, deviation: FloatArray
 ) -> FloatArray:
-    if alternative == "greater":
-        return np.asarray(special.ndtr((b - z * se) / s_null))
-    if alternative == "less":
-        return np.asarray(special.ndtr((-b - z * se) / s_null))
-    below = special.ndtr((-z * se - b) / s_null)
-    return np.asarray(below + special.ndtr((-z * se + b) / s_null))
+    """How often the test rejects where its null hypothesis just holds.
+
+    Parameters
+    ----------
+    asked : the test's question
+    se : (pairs,) standard error that the test uses
+    b : (pairs,) bias of its estimate, with its sign
+    deviation : (pairs,) true standard deviation of its estimate there
+    """
+    reach = asked.z * se
+    above = special.ndtr((b - reach) / deviation)
+    below = special.ndtr((-b - reach) / deviation)
+    if asked.side == "two-sided":
+        return np.asarray(above + below)
+    if asked.side == "greater":
+        return np.asarray(above)
+    if asked.side == "less":
+        return np.asarray(below)
+    # Equivalence errs where the truth is an end of the margin; the worse end counts.
+    room = asked.high - asked.low
+    at_low = special.ndtr((room - reach - b) / deviation) - special.ndtr((reach - b) / deviation)
+    at_high = special.ndtr((-reach - b) / deviation) - special.ndtr((reach - room - b) / deviation)
+    return np.asarray(np.maximum(np.maximum(at_low, at_high), np.where(np.isnan(se), np.nan, 0.0)))
 
 
-def _coverage(
-    z: float, se: FloatArray, b: FloatArray, s_u: FloatArray, alternative: str
-) -> FloatArray:
-    if alternative == "greater":
+def real_coverage(asked: Hypothesis, se: FloatArray, b: FloatArray, s_u: FloatArray) -> FloatArray:
+    """How often the limits hold what the weights estimate."""
+    z = asked.z
+    if asked.side == "greater":
         return np.asarray(special.ndtr((z * se - b) / s_u))
-    if alternative == "less":
+    if asked.side == "less":
         return np.asarray(special.ndtr((z * se + b) / s_u))
     upper = special.ndtr((z * se - b) / s_u)
     return np.asarray(upper - special.ndtr((-z * se - b) / s_u))

@@ -21,9 +21,10 @@ __all__ = ["ComparisonTable"]
 FloatArray = NDArray[np.float64]
 
 _NUMBERS = (
-    "se", "low", "high", "statistic", "df", "p", "correlation", "simple_estimate", "simple_se",
-    "simple_low", "simple_high", "simple_p", "shift", "shift_p", "variance_ratio",
-    "simple_error_rate", "simple_coverage",
+    "se", "low", "high", "statistic", "df", "p", "p_adjusted", "simultaneous_low",
+    "simultaneous_high", "correlation", "simple_estimate", "simple_se", "simple_low",
+    "simple_high", "simple_p", "shift", "shift_p", "variance_ratio", "simple_error_rate",
+    "simple_coverage",
 )  # fmt: skip
 
 
@@ -36,10 +37,12 @@ class ComparisonTable(Tabular):
     held, levels : names of the columns held fixed, and their labels in each row
     group, versus : what is compared with what
     rate, versus_rate : the two weighted rates
-    estimate : difference (proportion), ratio or odds ratio
-    se : standard error; on the log scale for the two ratios
+    estimate : difference (proportion), ratio, odds ratio or relative difference (proportion)
+    se : standard error; on the log scale for all but the difference
     low, high : confidence limits of the measure
     statistic, df, p : t statistic, its degrees of freedom and p-value
+    p_adjusted : p-value adjusted for the family of comparisons; `p` itself without adjustment
+    simultaneous_low, simultaneous_high : limits that hold together, where the method has any
     correlation : of the two rates; NaN against a fixed number
     simple_estimate, simple_se, simple_low, simple_high, simple_p : what the simple formula says
     shift, shift_p : simple minus weighted estimate, on the scale of `se`, and its p-value
@@ -47,8 +50,10 @@ class ComparisonTable(Tabular):
     simple_error_rate : how often the simple test rejects where the population rates are equal
     simple_coverage : how often the simple interval holds the weighted difference
     verdict : see the page "Read the verdict"
+    conclusion : what the adjusted test comes to, in a few words
     note : what a reader must know about a row, or ""
-    measure, alternative, null, limits, variant, level, fixed : the question
+    measure, alternative, null, margin, limits, multiplicity, family, variant, level, fixed : the
+        question
 
     Examples
     --------
@@ -81,6 +86,9 @@ class ComparisonTable(Tabular):
     statistic: FloatArray
     df: FloatArray
     p: FloatArray
+    p_adjusted: FloatArray
+    simultaneous_low: FloatArray
+    simultaneous_high: FloatArray
     correlation: FloatArray
     simple_estimate: FloatArray
     simple_se: FloatArray
@@ -93,11 +101,15 @@ class ComparisonTable(Tabular):
     simple_error_rate: FloatArray
     simple_coverage: FloatArray
     verdict: NDArray[np.object_]
+    conclusion: NDArray[np.object_]
     note: NDArray[np.object_]
     measure: str
     alternative: str
     null: float
+    margin: tuple[float, float] | None
     limits: str
+    multiplicity: str
+    family: str
     variant: str
     level: float
     fixed: float | None
@@ -106,6 +118,11 @@ class ComparisonTable(Tabular):
 
     def __len__(self) -> int:
         return len(self.group)
+
+    @property
+    def limits_level(self) -> float:
+        """Level of the limits: 1 - 2α for equivalence, `level` for all else."""
+        return 2.0 * self.level - 1.0 if self.alternative == "equivalent" else self.level
 
     def label_columns(self) -> tuple[list[str], list[tuple[object, ...]]]:
         """Names and values of the columns held fixed; the outcome only if there are several."""
@@ -125,7 +142,7 @@ class ComparisonTable(Tabular):
         -------
         pandas.DataFrame
             The columns held fixed, `group`, `versus`, `rate`, `versus_rate`, the measure under its
-            own name (`difference`, `ratio` or `odds_ratio`), then the rest in the order of the
+            own name (such as `difference` or `odds_ratio`), then the rest in the order of the
             attributes.
         """
         names, rows = self.label_columns()
@@ -140,7 +157,8 @@ class ComparisonTable(Tabular):
             self.measure: self.estimate,
         }
         data |= {name: getattr(self, name) for name in _NUMBERS}
-        data |= {"verdict": list(self.verdict), "note": list(self.note)}
+        for name in ("verdict", "conclusion", "note"):
+            data[name] = list(getattr(self, name))
         return pd.DataFrame(data)
 
     def find(self, group: object = None, versus: object = None, **held: object) -> int:

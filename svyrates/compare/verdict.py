@@ -6,17 +6,18 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
+from svyrates.compare.hypothesis import Hypothesis
 from svyrates.compare.simple import SimpleFormula
 
-__all__ = ["MEANINGS", "MISLEADING", "VERDICTS", "judge"]
+__all__ = ["MEANINGS", "MISLEADING", "VERDICTS", "judge", "meaning"]
 
 FloatArray = NDArray[np.float64]
 
 MEANINGS: dict[str, str] = {
     "undetermined": "too little sample to judge",
     "opposite": "the simple formula points the wrong way",
-    "false-alarm": "the simple formula finds a difference that the design does not support",
-    "missed": "the simple formula overlooks a difference that the design supports",
+    "false-alarm": "the simple formula finds {finding} that the design does not support",
+    "missed": "the simple formula overlooks {finding} that the design supports",
     "shifted": "same decision, but without weights the difference is another one",
     "overconfident": "same decision, but the simple interval is too narrow",
     "underconfident": "same decision, but the simple interval is too wide",
@@ -24,6 +25,12 @@ MEANINGS: dict[str, str] = {
 }
 VERDICTS: tuple[str, ...] = tuple(MEANINGS)
 MISLEADING: tuple[str, ...] = VERDICTS[1:-1]
+
+
+def meaning(verdict: str, finding: str = "a difference") -> str:
+    """A verdict in words; `finding` is what the test looks for."""
+    return MEANINGS[verdict].format(finding=finding)
+
 
 # Real coverage may part from the nominal one by this much before it is called wrong.
 TOLERANCE = 0.025
@@ -36,8 +43,7 @@ def judge(
     design_p: FloatArray,
     simple: SimpleFormula,
     df: FloatArray,
-    null: float,
-    level: float,
+    asked: Hypothesis,
 ) -> NDArray[np.object_]:
     """Give every pair its verdict, the first that applies in the order of `VERDICTS`.
 
@@ -46,15 +52,14 @@ def judge(
     design_estimate, design_variance, design_p : (pairs,) on the measure's scale
     simple : the simple formula's answers
     df : (pairs,)
-    null : null value on the measure's scale
-    level : confidence level; the tests are at 1 - level
+    asked : the test's question; equivalence has no opposite sides
 
     Notes
     -----
     A variance estimated on few degrees of freedom may not be blamed on the simple formula: the two
     last verdicts also ask that `df S_u²/S²` lie outside the central 1 - α range of χ² on df.
     """
-    alpha = 1.0 - level
+    alpha = 1.0 - asked.level
     undetermined = (
         np.isnan(design_p) | np.isnan(simple.p) | np.isnan(simple.s_u) | np.isnan(design_variance)
     )
@@ -62,11 +67,11 @@ def judge(
         design_finds = design_p < alpha
         simple_finds = simple.p < alpha
         shifted = simple.shift_p < alpha
-        across = (design_estimate - null) * (simple.on_scale - null) < 0
+        across = (design_estimate - asked.null) * (simple.on_scale - asked.null) < 0
         ratio = (simple.s_u / simple.se) ** 2
-        off = np.abs(simple.coverage - level) > TOLERANCE
+        off = np.abs(simple.coverage - asked.coverage) > TOLERANCE
         blame = off & outside_chi_square(ratio, df, alpha)
-        too_narrow = simple.coverage < level
+        too_narrow = simple.coverage < asked.coverage
     conditions = [
         undetermined,
         across & (design_finds | simple_finds) & shifted,

@@ -16,6 +16,7 @@ from svyrates.totals import (
     RatesOfSides,
     ReplicateSupport,
     ReplicateTotals,
+    SmoothFunction,
     Spread,
     Support,
     UnitSupport,
@@ -88,6 +89,10 @@ class CrudeRates:
         """Estimates of `[rate | unweighted]` of each row of `sides` (m, cells)."""
         totals = Estimates(self.units.totals, self._spread(kind))
         return totals.apply(RatesOfSides(sides))
+
+    def smooth(self, function: SmoothFunction) -> Estimates:
+        """Estimates of a smooth function of the totals `[n | y | N | Y]` of the cells."""
+        return Estimates(self.units.totals, self.units.spread).apply(function)
 
     def sides(self, sides: Any) -> SideRates:
         """Rates of each row of `sides` (m, cells), a signed sum of cells."""

@@ -8,29 +8,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.design import SampleDesign
-from svyrates.errors import DesignWarning, QuestionError, all_faults, some, warn
+from svyrates.errors import DesignWarning, some, warn
 from svyrates.rates.crude import CrudeRates
 from svyrates.rates.limits import INTERVALS, Interval, rate_limits
 from svyrates.rates.question import (
     Grouping,
-    Outcome,
-    read_grouping,
-    read_outcomes,
-    read_where,
 )
 from svyrates.rates.source import variances
-from svyrates.rates.table import Coverage, RateBlock, RateTable
-from svyrates.tally import tally_records, tally_replicates
-from svyrates.totals import CellTotals, ReplicateTotals, UnitTotals
-from svyrates.words import progress_bar
+from svyrates.rates.table import RateBlock, RateTable
+from svyrates.rates.tallied import Tallied, check_design, tally_question
 
 __all__ = ["estimate_rates"]
 
 FloatArray = NDArray[np.float64]
-# Where reading a column copies it, so many are held at a time.
-_FEW_COLUMNS = 6
-# Some 200 million weights are summed in a second.
-_WORTH_PROGRESS = 300_000_000
 DF_RULES = ("domain", "design", "satterthwaite", "scheme")
 
 
@@ -104,62 +94,24 @@ def estimate_rates(
     Each row is the estimated share of a tenure group whose home is often or always cold.
     """
     faults: list[str] = []
-    if not isinstance(design, SampleDesign):
-        raise QuestionError(
-            f"`design` must be a SampleDesign; got {type(design).__name__}. Build one with "
-            "SampleDesign(data, weight=..., strata=..., clusters=...)."
-        )
+    check_design(design)
     check_options(interval, level, df, faults)
-    _check_rule(design, df, faults)
-    outcomes = read_outcomes(design.frame, outcome, success, faults)
-    inside, n_where_unknown = read_where(design.frame, where, faults)
-    grouping = read_grouping(design.frame, by, faults)
-    all_faults(QuestionError, "The question has", faults)
-    pattern, coverage = _in_scope(design, grouping, inside, n_where_unknown)
-    together = [tuple(range(len(outcomes)))] if joint else [(i,) for i in range(len(outcomes))]
-    rule = df or ("domain" if design.replicates is None else "scheme")
-    blocks, parts = [], []
-    for positions in together:
-        levels = [outcomes[position].level for position in positions]
-        units = _totals(design, grouping, pattern, levels)
-        source = CrudeRates.of(units, design.df)
-        blocks.append(RateBlock(positions, source))
-        parts.append(_measure(source, len(positions), grouping, rule))
-    return _assemble(design, outcomes, grouping, coverage, blocks, parts, interval, level, rule)
+    check_rule(design, df, faults)
+    tallied = tally_question(design, outcome, success, by, where, faults, joint=joint)
+    rule = usual_rule(design, df)
+    parts = [
+        _measure(block.source, len(block.outcomes), tallied.grouping, rule)
+        for block in tallied.blocks
+    ]
+    return _assemble(design, tallied, parts, interval, level, rule)
 
 
-def _totals(
-    design: SampleDesign,
-    grouping: Grouping,
-    pattern: NDArray[np.int32],
-    levels: list[NDArray[np.int8]],
-) -> CellTotals:
-    """Tally the records by sampling unit, or by replicate."""
-    membership = grouping.membership
-    n_patterns = membership.shape[0]
-    if design.replicates is None:
-        tree = design.tree
-        tally = tally_records(tree.leaf, tree.n_leaves, design.weights, pattern, n_patterns, levels)
-        return UnitTotals(tally, membership, design.n_records, tree)
-    replicates = design.replicates
-    cells = design.n_records * replicates.count
-    with progress_bar("Replicates", cells, worth=cells > _WORTH_PROGRESS) as progress:
-        sums = tally_replicates(
-            design.replicate_column,
-            replicates.names,
-            design.weights,
-            pattern,
-            n_patterns,
-            levels,
-            factors=replicates.factors,
-            scale=replicates.scale,
-            together=replicates.count if design.reads_in_place else _FEW_COLUMNS,
-            progress=progress,
-        )
-    return ReplicateTotals(sums.tally, membership, design.n_records, sums, replicates)
+def usual_rule(design: SampleDesign, df: str | float | None) -> str | float:
+    """The rule asked for, or the usual one for this kind of variance."""
+    return df or ("domain" if design.replicates is None else "scheme")
 
 
-def _check_rule(design: SampleDesign, df: str | float | None, faults: list[str]) -> None:
+def check_rule(design: SampleDesign, df: str | float | None, faults: list[str]) -> None:
     """Check that the rule for the degrees of freedom fits the kind of variance."""
     replicates = design.replicates
     if replicates is None:
@@ -187,24 +139,6 @@ def check_options(interval: str, level: float, df: str | float | None, faults: l
     number = isinstance(df, int | float | np.number) and not isinstance(df, bool)
     if df is not None and df not in DF_RULES and not (number and float(df) > 0):
         faults.append(f"df must be one of {some(DF_RULES)} or a positive number; got {df!r}.")
-
-
-def _in_scope(
-    design: SampleDesign,
-    grouping: Grouping,
-    inside: NDArray[np.bool_] | None,
-    n_where_unknown: int,
-) -> tuple[NDArray[np.int32], Coverage]:
-    pattern = grouping.pattern
-    n_zero = int(design.n_records - np.count_nonzero(design.weights))
-    unknown = pattern < 0
-    if inside is None:
-        n_unknown, n_outside = int(np.count_nonzero(unknown)), 0
-    else:
-        n_unknown = int(np.count_nonzero(unknown & inside))
-        n_outside = int(np.count_nonzero(~inside))
-        pattern = np.where(inside, pattern, np.int32(-1))
-    return pattern, Coverage(design.n_records, n_zero, n_outside, n_where_unknown, n_unknown)
 
 
 def _measure(
@@ -237,16 +171,16 @@ def _measure(
 
 def _assemble(
     design: SampleDesign,
-    outcomes: list[Outcome],
-    grouping: Grouping,
-    coverage: Coverage,
-    blocks: list[RateBlock],
+    tallied: Tallied,
     parts: list[dict[str, FloatArray]],
     interval: str,
     level: float,
     df_rule: str | float,
 ) -> RateTable:
-    joined = {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    outcomes, grouping = tallied.outcomes, tallied.grouping
+    joined: dict[str, Any] = {
+        name: np.concatenate([part[name] for part in parts]) for name in parts[0]
+    }
     with np.errstate(invalid="ignore", divide="ignore"):
         n_star = joined["rate"] * (1.0 - joined["rate"]) / joined["se"] ** 2
     notes = _notes(joined, interval)
@@ -263,10 +197,10 @@ def _assemble(
         interval=interval,
         level=level,
         df_rule=df_rule,
-        coverage=coverage,
+        coverage=tallied.coverage,
         weights_are_relative=design.weights_are_relative,
         overlapping=grouping.overlapping,
-        blocks=tuple(blocks),
+        blocks=tuple(RateBlock(block.outcomes, block.source) for block in tallied.blocks),
         **joined,
     )
 

@@ -58,8 +58,13 @@ def rate_layout(rates: RateTable, *, percent: bool, every_column: bool) -> Table
             "design_effect", "design effect", rates.design_effect, lambda value: fixed(value, 2)
         ),
     ]
-    if not rates.n_missing.any():
-        columns = [column for column in columns if column.name != "n_missing"]
+    idle = {
+        "n": np.isnan(rates.n).all(),
+        "n_missing": not np.nan_to_num(rates.n_missing).any(),
+        "design_effect": np.isnan(rates.n).all(),
+        "df": np.isinf(rates.df).all(),
+    }
+    columns = [column for column in columns if not idle.get(column.name, False)]
     if any(marks):
         columns.append(Column("note", "note", marks))
     return Table(_title(rates), tuple(columns), (*remarks, *_about(rates)))
@@ -72,7 +77,7 @@ def _numbers(name: str, heading: str, values: Any, show: Callable[[Any], str]) -
 def machine_column(frame: pd.DataFrame, name: str) -> Column:
     """A column of a result's frame as it is, for files."""
     values = frame[name].tolist()
-    if name in ("verdict", "note", "presentation"):
+    if name in ("verdict", "conclusion", "note", "presentation"):
         return Column(name, name, values)
     return Column(name, name, values, kind="number")
 
@@ -93,9 +98,9 @@ def _letter(position: int) -> str:
 
 def _title(rates: RateTable) -> str:
     if len(rates.outcomes) > 1:
-        return f"Rates of {plural(len(rates.outcomes), 'outcome')}"
-    success = rates.success[0]
-    return f"Rate of {rates.outcomes[0]} = {success}"
+        kind = f", {rates.kind}" if rates.kind else ""
+        return f"Rates of {plural(len(rates.outcomes), 'outcome')}{kind}"
+    return f"Rate of {rates.what(0)}"
 
 
 def _about(rates: RateTable) -> list[str]:
@@ -104,7 +109,10 @@ def _about(rates: RateTable) -> list[str]:
     lines = [
         f"{level}% limits: {INTERVAL_NAMES[rates.interval]}, degrees of freedom: {rates.df_rule}."
     ]
+    lines += rates.remarks
     covered = rates.coverage
+    if covered is None:
+        return lines
     left_out = [
         f"{count(number)} {what}"
         for number, what in (

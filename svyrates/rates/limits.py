@@ -63,7 +63,7 @@ def rate_limits(
     Parameters
     ----------
     rate : (k,) proportions in [0, 1]; NaN gives NaN limits
-    n : (k,) unweighted sizes
+    n : (k,) unweighted sizes; NaN where unknown, and then no cap
     n_star : (k,) effective sizes p(1 - p)/V; not read where the rate is 0 or 1
     df : (k,) degrees of freedom; limits are NaN where they are 0, but for rates of 0 and 1
     method : one of `INTERVALS`
@@ -79,6 +79,7 @@ def rate_limits(
     Korn-Graubard then uses `n` itself (the rule of NCHS Series 2 No. 175), and Wald, logit and
     arcsine, which would have no width, fall back to Clopper-Pearson on `n`.
     """
+    n = np.where(np.isnan(n), np.inf, n)
     edge = (rate == 0.0) | (rate == 1.0)
     size = np.where(edge, n, n_star)
     exact = edge if method in _FALL_BACK or method == "korn-graubard" else np.zeros_like(edge)

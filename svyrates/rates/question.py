@@ -180,7 +180,12 @@ def read_where(frame: Frame, where: Any, faults: list[str]) -> tuple[BoolArray |
     return inside, int(np.count_nonzero(unknown))
 
 
-def read_grouping(frame: Frame, by: Any, faults: list[str]) -> Grouping:
+def read_grouping(
+    frame: Frame,
+    by: Any,
+    faults: list[str],
+    merge: Mapping[str, Mapping[object, object]] | None = None,
+) -> Grouping:
     """Read `by`: None, one column, several columns (crossed), or masks (may overlap)."""
     if by is None:
         pattern = np.zeros(len(frame), dtype=np.int32)
@@ -191,6 +196,8 @@ def read_grouping(frame: Frame, by: Any, faults: list[str]) -> Grouping:
     if len(set(map(str, names))) < len(names):
         faults.append(f"by names a column twice: {some(names)}.")
     coded = [fault_or(faults, code_column, frame, name, "by") for name in names]
+    if merge:
+        coded = _merged(names, coded, merge, faults)
     known = [codes for codes in coded if codes is not None]
     for name, codes in zip(names, coded, strict=True):
         if codes is not None and not codes.levels:
@@ -205,6 +212,41 @@ def read_grouping(frame: Frame, by: Any, faults: list[str]) -> Grouping:
     if faults:
         return _nothing(len(frame))
     return _crossed(names, known, n_cells)
+
+
+def _merged(
+    names: list[str],
+    coded: list[Codes | None],
+    merge: Mapping[str, Mapping[object, object]],
+    faults: list[str],
+) -> list[Codes | None]:
+    """Let levels join others, column by column."""
+    strange = [name for name in merge if name not in names]
+    if strange:
+        faults.append(f"merge names {some(strange)}; the columns are {some(names)}.")
+    return [
+        _joined(name, codes, merge[name], faults) if codes is not None and name in merge else codes
+        for name, codes in zip(names, coded, strict=True)
+    ]
+
+
+def _joined(name: str, codes: Codes, joins: Mapping[object, object], faults: list[str]) -> Codes:
+    levels = codes.levels
+    absent = [level for pair in joins.items() for level in pair if _position(levels, level) is None]
+    chains = [level for level in joins.values() if level in joins]
+    if absent or chains:
+        faults.append(
+            f"merge of {name!r}: "
+            + (f"{some(absent)} are no levels; these are {some(levels, 12)}. " if absent else "")
+            + (f"{some(chains)} both joins a level and takes one in." if chains else "")
+        )
+        return codes
+    target = list(range(len(levels)))
+    for level, partner in joins.items():
+        target[_position(levels, level) or 0] = _position(levels, partner) or 0
+    kept = sorted(set(target))
+    number = np.array([kept.index(position) for position in target] + [-1], dtype=np.int32)
+    return Codes(number[codes.codes], tuple(levels[position] for position in kept))
 
 
 def _crossed(names: list[str], coded: list[Codes], n_cells: int) -> Grouping:

@@ -71,7 +71,9 @@ class RateTable(Tabular):
     notes : what a reader must know about a row, or ""
     interval, level : method and confidence level of the limits
     df_rule : how degrees of freedom were counted
-    coverage : which records the table speaks of
+    coverage : which records the table speaks of; None where that is not known
+    kind : what kind of rates these are, "" for crude ones
+    remarks : what must be said under every table made of these rates
 
     Examples
     --------
@@ -106,10 +108,17 @@ class RateTable(Tabular):
     interval: str
     level: float
     df_rule: str | float
-    coverage: Coverage
+    coverage: Coverage | None
     weights_are_relative: bool
     overlapping: bool
     blocks: tuple[RateBlock, ...]
+    kind: str = ""
+    remarks: tuple[str, ...] = ()
+
+    def what(self, outcome: int) -> str:
+        """An outcome in words, such as "damp = 1, standardised for age"."""
+        success = f" = {self.success[outcome]}" if self.success[outcome] else ""
+        return f"{self.outcomes[outcome]}{success}" + (f", {self.kind}" if self.kind else "")
 
     @property
     def variance(self) -> FloatArray:
@@ -200,7 +209,8 @@ class RateTable(Tabular):
             name: [row[position] for row in rows] for position, name in enumerate(names)
         }
         for name in ("n", "n_success", "n_missing"):
-            data[name] = getattr(self, name).astype(np.int64)
+            values = getattr(self, name)
+            data[name] = values if np.isnan(values).any() else values.astype(np.int64)
         for name in (
             "weighted_n", "rate", "se", "low", "high", "df", "design_effect", "n_effective",
             "kish_factor", "rse", "unweighted_rate",

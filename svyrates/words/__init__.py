@@ -1,7 +1,7 @@
 """Numbers, sentences and tables for readers; a leaf that knows no statistics."""
 
 from svyrates.words.escape import display_width, for_html, for_terminal, shorten
-from svyrates.words.numbers import count, fixed, p_value, percent, points, significant
+from svyrates.words.numbers import count, fixed, p_phrase, p_value, percent, points, significant
 from svyrates.words.progress import progress_bar
 from svyrates.words.sentences import join_words, plural
 from svyrates.words.table import Column, Table
@@ -17,6 +17,7 @@ __all__ = [
     "for_html",
     "for_terminal",
     "join_words",
+    "p_phrase",
     "p_value",
     "percent",
     "plural",

@@ -16,6 +16,7 @@ __all__ = [
     "count",
     "fixed",
     "is_missing",
+    "p_phrase",
     "p_value",
     "percent",
     "points",
@@ -88,6 +89,12 @@ def points(value: Any, digits: int = 1) -> str:
         return unusual
     rounded = _rounded(value, digits, times=100)
     return f"{rounded:+f} points" if rounded else f"{rounded:f} points"
+
+
+def p_phrase(value: Any) -> str:
+    """A p-value for a sentence: ``'p = 0.0421'`` or ``'p < 0.0001'``."""
+    text = p_value(value)
+    return f"p {text[0]} {text[1:]}" if text[:1] in "<>" else f"p = {text}"
 
 
 def p_value(value: Any) -> str:
