@@ -56,6 +56,10 @@ def comparison_notes(
             "too little sample to judge the simple formula: a rate is exactly 0 or 1"
             + (f"; {recovered}" if measure == "difference" else f"; {of_ratio}"),
         ),
+        (
+            np.isnan(joint.n[0]) | (np.isnan(joint.n[1]) & (joint.fixed is None)),
+            "no sample size was published, so the simple formula cannot be computed",
+        ),
         (usable & (se == 0.0), "the standard error is zero, so there is no test"),
         (
             usable & thin & (limits == "linear"),

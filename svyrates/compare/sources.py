@@ -52,6 +52,8 @@ def step_ratios(table: ComparisonTable) -> FloatArray:
 
 def _steps(measure: str, block: PairBlock) -> FloatArray:
     """Variance of each difference for independent records, units apart, and units together."""
+    if not block.source.knows_records:
+        return np.full((3, block.plus.size), np.nan)
     records = block.source.estimates(block.sides, "independent-records")
     units = block.source.estimates(block.sides, "unstratified")
     m = block.sides.shape[0]
