@@ -164,8 +164,30 @@ def compare(
     within: Annotated[
         Names, typer.Option(help="Grouping column to hold fixed; may be repeated.")
     ] = None,
-    measure: Annotated[str, typer.Option(help="difference, ratio or odds_ratio.")] = "difference",
-    alternative: Annotated[str, typer.Option(help="two-sided, greater or less.")] = "two-sided",
+    measure: Annotated[
+        str, typer.Option(help="difference, ratio, odds_ratio or relative_difference.")
+    ] = "difference",
+    alternative: Annotated[
+        str,
+        typer.Option(help="two-sided, greater, less, equivalent, not-lower or not-higher."),
+    ] = "two-sided",
+    null: Annotated[
+        float | None, typer.Option(help="Value of the measure under the null hypothesis.")
+    ] = None,
+    margin: Annotated[
+        list[float] | None,
+        typer.Option(help="For the last three alternatives; give it twice for two ends."),
+    ] = None,
+    multiplicity: Annotated[
+        str,
+        typer.Option(
+            help="none, bonferroni, sidak, holm, hochberg, benjamini-hochberg, "
+            "benjamini-yekutieli or max-t."
+        ),
+    ] = "none",
+    family: Annotated[
+        str, typer.Option(help="Adjust the comparisons of each level together, or of the table.")
+    ] = "level",
     limits: Annotated[str, typer.Option(help="linear or recovered.")] = "linear",
     simple: Annotated[
         str, typer.Option(help="unweighted, weighted, weights-as-counts or kish.")

@@ -37,6 +37,10 @@ def run_compare(
     within: list[str] | None,
     measure: str,
     alternative: str,
+    null: float | None,
+    margin: list[float] | None,
+    multiplicity: str,
+    family: str,
     limits: str,
     simple: str,
     interval: str,
@@ -75,6 +79,10 @@ def run_compare(
                 within=within,
                 measure=measure,  # type: ignore[arg-type]
                 alternative=alternative,  # type: ignore[arg-type]
+                null=null,
+                margin=_margin(margin),
+                multiplicity=multiplicity,  # type: ignore[arg-type]
+                family=family,  # type: ignore[arg-type]
                 limits=limits,  # type: ignore[arg-type]
                 simple=simple,  # type: ignore[arg-type]
             )
@@ -168,6 +176,14 @@ def _number_or_text(text: str | None) -> str | float | None:
         return None if text is None else float(text)
     except ValueError:
         return text
+
+
+def _margin(ends: list[float] | None) -> float | tuple[float, float] | None:
+    if not ends or len(ends) == 1:
+        return ends[0] if ends else None
+    if len(ends) > 2:
+        raise QuestionError(f"--margin was given {len(ends)} times; it has one end or two.")
+    return ends[0], ends[1]
 
 
 def _versus(text: str | None, rates: RateTable) -> Any:

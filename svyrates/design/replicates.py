@@ -173,7 +173,8 @@ def read_replicates(
     planned = plan(asked, len(names), strata, known_df)
     df = float(asked.df) if asked.df is not None else planned.df
     if asked.df is None:
-        df = min(df, rank_of_deviations(frame, names, weights, asked.factors, scale, int(df)))
+        rank = rank_of_deviations(frame, names, weights, asked.factors, scale, int(df))
+        df = min(df, float(rank))
     return ReplicateSet(
         names=names,
         scheme=asked.scheme,
