@@ -84,6 +84,68 @@ def taylor(data: pd.DataFrame) -> object:
     return estimator
 
 
+def replicated(n: int = N, count: int = 80, *, by_rows: bool = False) -> pd.DataFrame:
+    """A file with bootstrap-like weights, whose block in memory runs by columns or by rows."""
+    data = survey(n)
+    noise = np.random.default_rng(4)
+    matrix = np.empty((n, count), order="C" if by_rows else "F")
+    for position in range(count):
+        matrix[:, position] = data["w"] * noise.uniform(0.0, 2.0, n)
+    names = [f"rw_{position}" for position in range(1, count + 1)]
+    return pd.concat([data, pd.DataFrame(matrix, columns=names, copy=False)], axis=1)
+
+
+def replicate_design(data: pd.DataFrame) -> sr.SampleDesign:
+    weights = sr.ReplicateWeights("rw_*", scheme="bootstrap")
+    return sr.SampleDesign(data, weight="w", replicates=weights)
+
+
+def replicate_rates(design: sr.SampleDesign) -> object:
+    return sr.estimate_rates(design, "y", by="g")
+
+
+def replicate_estimator(data: pd.DataFrame) -> object:
+    """The domain estimate of samplics under replicate weights, without covariances."""
+    from samplics.estimation import ReplicateEstimator
+    from samplics.utils.types import PopParam, RepMethod
+
+    estimator = ReplicateEstimator(RepMethod.bootstrap, PopParam.mean)
+    names = [name for name in data if str(name).startswith("rw_")]
+    estimator.estimate(
+        y=data["y"].to_numpy(),
+        samp_weight=data["w"].to_numpy(),
+        rep_weights=data[names].to_numpy(),
+        domain=data["g"].to_numpy(),
+    )
+    return estimator
+
+
+def _rates_over_sum(data: pd.DataFrame, what: str) -> None:
+    design, matrix = replicate_design(data), data.filter(like="rw_").to_numpy()
+    _report(
+        f"rates under 80 replicates, {what}, over one sum(axis=0) of them",
+        ratio(lambda: replicate_rates(design), lambda: matrix.sum(axis=0)),
+    )
+    if what == "block by columns":
+        _report(
+            "declaring and checking them over the same sum",
+            ratio(lambda: replicate_design(data), lambda: matrix.sum(axis=0), rounds=3),
+        )
+
+
+def _replicates() -> None:
+    _rates_over_sum(replicated(), "block by columns")
+    _rates_over_sum(replicated(by_rows=True), "block by rows")
+    single = dict.fromkeys([f"rw_{i}" for i in range(1, 81)], np.float32)
+    _rates_over_sum(replicated().astype(single), "single precision")
+    data = replicated()
+    design = replicate_design(data)
+    _report(
+        "samplics' replicate estimate over ours",
+        ratio(lambda: replicate_estimator(data), lambda: replicate_rates(design), rounds=1),
+    )
+
+
 def _import_ratio() -> float:
     """Importing the package with all it needs, over pandas and scipy.stats."""
 
@@ -141,6 +203,7 @@ def main() -> None:
         "samplics' domain estimate over design, rates and all pairs",
         ratio(lambda: taylor(usual), lambda: first_call(usual), rounds=1),
     )
+    _replicates()
     _report("import over pandas and scipy.stats", _import_ratio())
 
 

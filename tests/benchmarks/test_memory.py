@@ -7,9 +7,18 @@ import warnings
 from collections.abc import Callable
 
 import numpy as np
+import pytest
 
 import svyrates as sr
-from tests.benchmarks.speed import design_of, first_call, second_call, survey
+from tests.benchmarks.speed import (
+    design_of,
+    first_call,
+    replicate_design,
+    replicate_rates,
+    replicated,
+    second_call,
+    survey,
+)
 
 
 def _peak(job: Callable[[], object]) -> int:
@@ -31,6 +40,19 @@ def test_bytes_a_record() -> None:
     # The small matrices of a question do not grow with the records.
     fixed = 3_000_000
     assert (_peak(lambda: first_call(data)) - fixed) / n <= 48
+
+
+@pytest.mark.parametrize("by_rows", [False, True])
+@pytest.mark.parametrize("precision", [np.float32, np.float64])
+def test_replicates_without_a_copy_of_them(by_rows: bool, precision: type) -> None:
+    """At most a tenth of the weight matrix in double precision, whatever its layout and type."""
+    n, count = 200_000, 80
+    data = replicated(n, count, by_rows=by_rows)
+    if precision is np.float32:
+        data = data.astype({f"rw_{i}": precision for i in range(1, count + 1)})
+    design = replicate_design(data)
+    assert _peak(lambda: replicate_rates(design)) < 0.1 * n * count * 8
+    assert _peak(lambda: replicate_design(data)) < 0.1 * n * count * 8
 
 
 def test_no_table_of_households_by_groups() -> None:

@@ -153,6 +153,42 @@ def test_where(survey: pd.DataFrame, file: Path, tmp_path: Path) -> None:
     assert found["n"].tolist() == expected["n"].tolist()
 
 
+@pytest.mark.parametrize(
+    ("arguments", "options"),
+    [
+        (["--multiplicity", "holm"], {"multiplicity": "holm"}),
+        (
+            ["--alternative", "equivalent", "--margin", -0.1, "--margin", 0.2],
+            {"alternative": "equivalent", "margin": (-0.1, 0.2)},
+        ),
+        (
+            ["--measure", "relative_difference", "--null", 0.5],
+            {"measure": "relative_difference", "null": 0.5},
+        ),
+    ],
+)
+def test_questions_in_depth(
+    survey: pd.DataFrame,
+    file: Path,
+    tmp_path: Path,
+    arguments: list[object],
+    options: dict[str, object],
+) -> None:
+    out = tmp_path / "gaps.json"
+    asked = [*DESIGN, *QUESTION, "--by", "tenure", *arguments, "--out", out]
+    assert run("compare", file, *asked) == 0
+    found = pd.DataFrame(json.loads(out.read_text(encoding="utf-8"))["rows"])
+    text = survey.astype({"tenure": object, "sex": object})
+    design = sr.SampleDesign(text, weight="wt", strata="district", clusters="block")
+    rates = sr.estimate_rates(design, "cold_home", success=["often", "always"], by="tenure")
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
+        expected = sr.compare_rates(rates, **options).to_frame()
+    for name in ("p", "p_adjusted", "low"):
+        np.testing.assert_allclose(found[name], expected[name], rtol=1e-9)
+    assert found["conclusion"].tolist() == expected["conclusion"].tolist()
+
+
 def _replicated(survey: pd.DataFrame) -> sr.SampleDesign:
     plain = survey.astype({"tenure": object, "sex": object})
     design = sr.SampleDesign(plain, weight="wt", strata="district", clusters="block")
@@ -270,6 +306,8 @@ BAD: list[tuple[str, bytes | str, list[str], str]] = [
     ("g.csv", GOOD, [*ASK, "--out", "x.xlsx"], "results are written as '.csv' or '.json'"),
     ("g.csv", GOOD, [*ASK, "--out", "/dev/null/no/x.csv"], "cannot be written"),
     ("g.csv", GOOD, ["--outcome", "y", "--out", "x.csv"], "there are none without --by"),
+    ("g.csv", GOOD, [*ASK, *["--margin", "1"] * 3], "--margin was given 3 times"),
+    ("g.csv", GOOD, [*ASK, "--multiplicity", "tukey"], "multiplicity must be one of"),
     ("g.csv", GOOD, [*ASK, "--replicates", "w"], "--replicates and --scheme go together"),
     ("g.csv", GOOD, [*ASK, "--key", "w"], "--replicate-file and --key go together"),
     ("g.csv", GOOD, [*ASK, "--key", "w", "--replicate-file", "g.csv"], "needs --replicates"),
