@@ -30,6 +30,7 @@ if TYPE_CHECKING:
         DesignSummary,
         ReplicateWeights,
         SampleDesign,
+        combine_waves,
         make_replicates,
         merge_replicates,
     )
@@ -66,6 +67,7 @@ __all__ = [
     "ReplicateWeights",
     "SampleDesign",
     "SimpleFormulaWarning",
+    "combine_waves",
     "common_difference",
     "compare_rates",
     "contrast",
@@ -101,6 +103,7 @@ _HOMES = {
         "DesignSummary",
         "ReplicateWeights",
         "SampleDesign",
+        "combine_waves",
         "make_replicates",
         "merge_replicates",
     ),

@@ -122,7 +122,8 @@ class ComparisonTable(Tabular):
     @property
     def limits_level(self) -> float:
         """Level of the limits: 1 - 2α for equivalence, `level` for all else."""
-        return 2.0 * self.level - 1.0 if self.alternative == "equivalent" else self.level
+        level = 2.0 * self.level - 1.0 if self.alternative == "equivalent" else self.level
+        return round(level, 12)
 
     def label_columns(self) -> tuple[list[str], list[tuple[object, ...]]]:
         """Names and values of the columns held fixed; the outcome only if there are several."""

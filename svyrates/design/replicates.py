@@ -57,6 +57,9 @@ class ReplicateWeights:
         Implied decimals: the columns are divided by 10 to this power.
     df : float, optional
         Degrees of freedom, if the agency states them; the scheme's own otherwise.
+    may_leave_out : bool, optional
+        Whether a replicate in which a rate is undefined may be left out; for all schemes but the
+        jackknives by default.
 
     Notes
     -----
@@ -92,6 +95,7 @@ class ReplicateWeights:
     factors: bool = False
     decimals: int = 0
     df: float | None = None
+    may_leave_out: bool | None = None
 
 
 @dataclass(frozen=True)
@@ -109,6 +113,7 @@ class ReplicateSet:
     stratum, units : (replicates,) stratum of each replicate and its units, for Satterthwaite's
         degrees of freedom; None where the scheme has none
     n_negative : negative replicate weights, which some schemes produce
+    may_leave_out : whether a replicate may be left out where a rate is undefined in it
     """
 
     names: tuple[str, ...]
@@ -121,16 +126,12 @@ class ReplicateSet:
     stratum: IntArray | None
     units: IntArray | None
     n_negative: int
+    may_leave_out: bool
 
     @property
     def count(self) -> int:
         """Number of replicates."""
         return len(self.names)
-
-    @property
-    def may_leave_out(self) -> bool:
-        """Whether a replicate may be left out where a rate is undefined in it."""
-        return self.scheme not in JACKKNIVES
 
 
 def read_replicates(
@@ -186,6 +187,9 @@ def read_replicates(
         stratum=planned.stratum,
         units=planned.units,
         n_negative=n_negative,
+        may_leave_out=(
+            asked.scheme not in JACKKNIVES if asked.may_leave_out is None else asked.may_leave_out
+        ),
     )
 
 

@@ -99,6 +99,7 @@ class SampleDesign:
             "strata": _names(strata),
             "clusters": _names(clusters),
             "population": _names(population),
+            "single_cluster_strata": single_cluster_strata,
         }
         if not isinstance(single_cluster_strata, Mapping) and single_cluster_strata not in POLICIES:
             faults.append(
@@ -121,6 +122,11 @@ class SampleDesign:
     def frame(self) -> Frame:
         """The user's frame, wrapped by narwhals and otherwise untouched."""
         return self._frame
+
+    @property
+    def columns(self) -> Mapping[str, Any]:
+        """What was declared: role -> column or columns, and the policy for lone units."""
+        return self._columns
 
     @property
     def weights(self) -> FloatArray:
