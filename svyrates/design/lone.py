@@ -22,10 +22,18 @@ _SHOWN = 6
 
 @dataclass(frozen=True, slots=True)
 class LonePolicy:
-    """What was done about the single-unit strata, kept for the summary."""
+    """What was done about the single-unit strata, kept for the summary and for later waves.
+
+    Attributes
+    ----------
+    strata : the strata with a single unit
+    done : what was done, in words
+    joined : the strata joined with each other, where they were
+    """
 
     strata: tuple[str, ...]
     done: str
+    joined: tuple[tuple[str, ...], ...] = ()
 
 
 def lone_strata(tree: Hierarchy) -> IntArray:
@@ -66,10 +74,12 @@ def collapse(
             f"the mapping in single_cluster_strata leaves {len(left)} strata with a single unit: "
             f"{some(left)}. Name a partner for each."
         )
-    named = [" with ".join(labels[stratum] for stratum in group) for group in groups]
+    named = tuple(tuple(labels[stratum] for stratum in group) for group in groups)
     more = f"; and {len(named) - _SHOWN} more" if len(named) > _SHOWN else ""
-    done = f"joined: {'; '.join(named[:_SHOWN])}{more}"
-    return merged, LonePolicy(tuple(labels[stratum] for stratum in lone), done)
+    listed = "; ".join(" with ".join(group) for group in named[:_SHOWN])
+    return merged, LonePolicy(
+        tuple(labels[stratum] for stratum in lone), f"joined: {listed}{more}", named
+    )
 
 
 def _sorted_pairs(lone: IntArray, n_strata: int) -> list[list[int]]:

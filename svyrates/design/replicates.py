@@ -57,9 +57,6 @@ class ReplicateWeights:
         Implied decimals: the columns are divided by 10 to this power.
     df : float, optional
         Degrees of freedom, if the agency states them; the scheme's own otherwise.
-    may_leave_out : bool, optional
-        Whether a replicate in which a rate is undefined may be left out; for all schemes but the
-        jackknives by default.
 
     Notes
     -----
@@ -95,7 +92,6 @@ class ReplicateWeights:
     factors: bool = False
     decimals: int = 0
     df: float | None = None
-    may_leave_out: bool | None = None
 
 
 @dataclass(frozen=True)
@@ -113,7 +109,7 @@ class ReplicateSet:
     stratum, units : (replicates,) stratum of each replicate and its units, for Satterthwaite's
         degrees of freedom; None where the scheme has none
     n_negative : negative replicate weights, which some schemes produce
-    may_leave_out : whether a replicate may be left out where a rate is undefined in it
+    side_by_side : the independent sets that lie side by side in this one; empty for a set of one
     """
 
     names: tuple[str, ...]
@@ -126,12 +122,27 @@ class ReplicateSet:
     stratum: IntArray | None
     units: IntArray | None
     n_negative: int
-    may_leave_out: bool
+    side_by_side: tuple[ReplicateSet, ...] = ()
 
     @property
     def count(self) -> int:
         """Number of replicates."""
         return len(self.names)
+
+    @property
+    def may_leave_out(self) -> bool:
+        """Whether a replicate may be left out where a rate is undefined in it."""
+        return self.scheme not in JACKKNIVES
+
+    @property
+    def sets(self) -> tuple[tuple[slice, bool], ...]:
+        """Where each independent set lies, and whether its replicates may be left out."""
+        found = []
+        start = 0
+        for one in self.side_by_side or (self,):
+            found.append((slice(start, start + one.count), one.may_leave_out))
+            start += one.count
+        return tuple(found)
 
 
 def read_replicates(
@@ -143,6 +154,8 @@ def read_replicates(
     faults: list[str],
 ) -> ReplicateSet | None:
     """Find the columns, check them and the options, and work out coefficients and df."""
+    if isinstance(asked, ReplicateSet):
+        return asked
     if not isinstance(asked, ReplicateWeights):
         faults.append(f"replicates must be ReplicateWeights(...); got {type(asked).__name__}.")
         return None
@@ -187,9 +200,6 @@ def read_replicates(
         stratum=planned.stratum,
         units=planned.units,
         n_negative=n_negative,
-        may_leave_out=(
-            asked.scheme not in JACKKNIVES if asked.may_leave_out is None else asked.may_leave_out
-        ),
     )
 
 

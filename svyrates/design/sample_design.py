@@ -88,7 +88,7 @@ class SampleDesign:
         clusters: str | Sequence[str] | None = None,
         population: str | Sequence[str] | None = None,
         single_cluster_strata: SingleClusterStrata = "error",
-        replicates: ReplicateWeights | None = None,
+        replicates: ReplicateWeights | ReplicateSet | None = None,
     ) -> None:
         frame = open_frame(data)
         faults: list[str] = []
@@ -99,13 +99,13 @@ class SampleDesign:
             "strata": _names(strata),
             "clusters": _names(clusters),
             "population": _names(population),
-            "single_cluster_strata": single_cluster_strata,
         }
         if not isinstance(single_cluster_strata, Mapping) and single_cluster_strata not in POLICIES:
             faults.append(
                 f"single_cluster_strata must be one of {some(POLICIES)} or a mapping of stratum "
                 f"to partner; got {single_cluster_strata!r}."
             )
+        self._single = single_cluster_strata
         self._weights = read_weights(frame, weight, weight_decimals, faults)
         self._tree, self._lone, self._repeated = read_tree(
             frame, self._columns, single_cluster_strata if replicates is None else None, faults
@@ -124,11 +124,6 @@ class SampleDesign:
         return self._frame
 
     @property
-    def columns(self) -> Mapping[str, Any]:
-        """What was declared: role -> column or columns, and the policy for lone units."""
-        return self._columns
-
-    @property
     def weights(self) -> FloatArray:
         """Sampling weight of every record, shape (records,)."""
         return self._weights
@@ -142,6 +137,16 @@ class SampleDesign:
     def replicates(self) -> ReplicateSet | None:
         """The replicate weights, if the design has them."""
         return self._replicates
+
+    @property
+    def declared(self) -> dict[str, Any]:
+        """Arguments the design was declared with, its frame and replicates apart."""
+        return {**self._columns, "single_cluster_strata": self._single}
+
+    @property
+    def joined_strata(self) -> tuple[tuple[str, ...], ...]:
+        """Labels of the strata that were joined because one held a single sampling unit."""
+        return () if self._lone is None else self._lone.joined
 
     def with_replicates(self, data: Any, replicates: ReplicateWeights) -> SampleDesign:
         """The same design of a frame that has replicate weights as well."""

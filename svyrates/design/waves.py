@@ -1,24 +1,28 @@
-"""`combine_waves`: several samples in one design, so that change over time has its covariance."""
+"""`combine_waves`: several samples over time as one design, with the covariance they share."""
 
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import dataclass
 from typing import Any
 
-import narwhals.stable.v2 as nw
 import numpy as np
-import pandas as pd
-from numpy.typing import NDArray
 
-from svyrates.design.columns import Frame
-from svyrates.design.replicates import ReplicateSet, ReplicateWeights
+from svyrates.design.columns import ColumnFault, Frame, code_column
 from svyrates.design.sample_design import SampleDesign
+from svyrates.design.stacking import apart, missing_somewhere, stack
+from svyrates.design.wave_checks import ROLES, check_waves, kind_faults, lone_policy
+from svyrates.design.wave_replicates import (
+    needs_finished,
+    replicate_faults,
+    shared_columns,
+    shared_set,
+    side_by_side_columns,
+    side_by_side_set,
+)
 from svyrates.errors import DesignError, DesignWarning, all_faults, some, warn
 
 __all__ = ["combine_waves"]
-
-FloatArray = NDArray[np.float64]
-ROLES = ("strata", "clusters", "population")
 
 
 def combine_waves(
@@ -28,312 +32,292 @@ def combine_waves(
     name: str = "wave",
     average_weights: bool = False,
 ) -> SampleDesign:
-    """Put waves of a survey into one design, with a column that tells them apart.
+    """Stack the samples of several waves into one design, to compare or average over time.
 
     Parameters
     ----------
-    waves : dict of str -> SampleDesign
-        Label -> design, in the order of time. Their frames are of one library.
+    waves : mapping of str to SampleDesign
+        The waves by label, in the order in which tables shall show them. Their frames are of one
+        library; columns that not all of them have are left out, with a warning. Design columns may
+        differ in name between waves: those of the first wave are kept.
     shared_clusters : bool
-        Whether the waves were drawn in the same sampling units, so that equal codes of strata and
-        clusters (or equal replicates) are the same units. Independent samples by default.
+        Whether the same stratum and cluster codes (or the same number of a replicate) mean the same
+        units in every wave. Otherwise the waves are independent samples.
     name : str
-        Column that holds the label of the wave.
+        The new column with the label of the wave: an ordered category, or text where the library
+        has none.
     average_weights : bool
-        Divide the weights by the number of waves, so that all records together stand for an average
-        population; rates of a wave do not change.
+        Whether to divide the weights by the number of waves, so that they sum to the average
+        population. The rates of each wave do not change.
 
     Returns
     -------
     SampleDesign
-        Group by `name` to compare the waves; leave it out for their pooled rate.
+        Of the stacked frame. No wave is changed.
 
     Raises
     ------
     DesignError
-        Lists everything in which the designs do not fit together.
+        Lists every reason for which the waves do not fit together.
 
     Warns
     -----
     DesignWarning
-        When columns that only some waves have are left out.
+        When columns are left out, or no cluster is in two waves although they share clusters.
 
     Notes
     -----
-    Independent samples: strata are crossed with the wave, so that nothing is shared; replicate sets
-    stand side by side, each with the other waves at their full weight. Shared units: a unit's total
-    holds the records of all waves, and replicates of the same index belong together, so that
-    `V(p_2 - p_1)` keeps its covariance (Kish 1965, section 12.4, from memory).
+    *Independent* are waves whose first-stage units were drawn anew and separately: every stratum is
+    crossed with the wave, and `V(p_2 - p_1) = V(p_1) + V(p_2)`. Waves *share clusters* when they
+    interview in the same first-stage units, also with other households, and all the more when they
+    interview the same people, as panels and rotating samples do. Neighbours are alike in both
+    waves, so `V(p_2 - p_1) = V(p_1) + V(p_2) - 2 Cov(p_1, p_2)`, as a rule with a positive
+    covariance (Kish 1965, chapter 12; Wolter 2007, chapter 6; from memory). What is shared is what
+    the codes say at every stage that counts: where the waves share blocks, but dwellings are
+    numbered anew, name the blocks alone. The variance treats the units of all waves in a stratum as
+    one sample of units, so a unit outside a wave counts there with a total of zero.
+
+    Replicate weights of waves that share clusters were made from the same units under the same
+    number, and are put under one another; the degrees of freedom are the least of the waves'.
+    Those of independent waves are set side by side, `V = Σ_waves Σ_r c_r (θ_r - θ)²`: in the
+    replicates of one wave, the others keep their full weight. The degrees of freedom add up.
 
     Examples
     --------
     >>> import svyrates as sr
-    >>> designs = {
+    >>> waves = {
     ...     wave: sr.SampleDesign(
     ...         sr.demo_survey(wave), weight="wt", strata="district", clusters="block"
     ...     )
     ...     for wave in ("2021", "2024")
     ... }
-    >>> both = sr.combine_waves(designs, shared_clusters=True)
-    >>> both.n_units
-    112
+    >>> design = sr.combine_waves(waves, shared_clusters=True)
+    >>> rates = sr.estimate_rates(design, "damp", by="wave")
+    >>> rates.groups
+    (('2021',), ('2024',))
+    >>> bool(rates.covariance.iloc[0, 1] > 0)
+    True
 
-    The blocks of the two waves are the same 112 blocks.
+    The survey went back to its blocks, so the two rates are correlated, and their difference is
+    known better than the rates themselves would suggest.
     """
-    designs = _checked(waves, name, shared_clusters)
-    first = next(iter(designs.values()))
-    columns, renamed, faults = _columns(designs, name)
-    all_faults(DesignError, "The waves do not fit together:", faults)
-    share = 1.0 / len(designs) if average_weights else 1.0
-    weight = first.columns["weight"] or _free("weight", [*columns, name])
-    parts = {
-        label: _part(design, columns, renamed[label], weight, share)
-        for label, design in designs.items()
-    }
-    replicates = None
-    if first.replicates is not None:
-        build = _shared_replicates if shared_clusters else _side_by_side
-        parts, replicates = build(designs, parts, share, [*columns, name, weight])
-    stacked = _stacked(parts, name)
-    strata = first.columns["strata"]
-    if not shared_clusters:
-        strata = (name, *strata)
-    # Independent replicate sets carry degrees of freedom of their own.
-    apart = replicates is not None and not shared_clusters
-    return SampleDesign(
-        stacked,
+    check_waves(waves, name)
+    labels, designs = list(waves), list(waves.values())
+    faults = kind_faults(designs, labels, shared_clusters)
+    faults += replicate_faults(designs, labels, shared=shared_clusters)
+    single = lone_policy(designs, labels, name, shared_clusters, faults)
+    frames = [
+        _prepared(design, label, designs[0], name, shared_clusters, faults)
+        for label, design in zip(labels, designs, strict=True)
+    ]
+    plan = _Plan.of(designs, name, shared_clusters, average_weights)
+    left_out = missing_somewhere(frames)
+    names = [column for column in frames[0].columns if column not in {*left_out, *plan.replaced}]
+    unlike = {column: kinds for column in names if (kinds := apart(frames, column))}
+    faults += [
+        f"column {column!r} holds {' and '.join(dict.fromkeys(kinds))} values in different waves. "
+        "Convert it to one type in all of them."
+        for column, kinds in unlike.items()
+        if column in plan.needed
+    ]
+    all_faults(DesignError, "The waves have", faults)
+    _tell_left_out([column for column in left_out if column not in plan.replaced], list(unlike))
+    names = [column for column in names if column not in unlike]
+    added, replicates = plan.computed({*names, name})
+    weight = plan.weight_name({*names, name, *added})
+    if plan.finish_weights and weight is not None:
+        added = {weight: np.concatenate([d.weights / plan.over for d in designs]), **added}
+    combined = SampleDesign(
+        stack(frames, names, name, labels, added),
         weight=weight,
-        strata=None if apart else strata or None,
-        clusters=None if apart else first.columns["clusters"] or None,
-        population=None if replicates is not None else first.columns["population"] or None,
-        single_cluster_strata=first.columns["single_cluster_strata"],
+        weight_decimals=0 if plan.finish_weights else plan.first["weight_decimals"],
+        strata=plan.strata,
+        clusters=plan.first["clusters"] or None,
+        population=plan.first["population"] or None,
+        single_cluster_strata=single,
         replicates=replicates,
     )
+    if shared_clusters:
+        _question_sharing(combined, [design.n_records for design in designs])
+    return combined
 
 
-def _checked(waves: object, name: object, shared: bool) -> dict[str, SampleDesign]:
-    """The waves by label, after the faults that need no look into their columns."""
-    if not isinstance(waves, Mapping) or len(waves) < 2:
-        raise DesignError("`waves` must be a dict of label -> SampleDesign with two waves or more.")
-    strange = [label for label, each in waves.items() if not isinstance(each, SampleDesign)]
-    if strange:
-        raise DesignError(f"waves {some(strange)} are no SampleDesign.")
-    designs = {str(label): design for label, design in waves.items()}
-    faults = []
-    if len(designs) < len(waves):
-        faults.append(f"labels repeat: {some([str(label) for label in waves])}.")
-    if not isinstance(name, str) or not name:
-        faults.append(f"name must be the name of a column; got {name!r}.")
-    faults += _kind_faults(list(designs.values()), shared)
-    all_faults(DesignError, "The waves do not fit together:", faults)
-    return designs
+@dataclass(frozen=True)
+class _Plan:
+    """What the stack will hold beside the columns that are kept as they are."""
 
+    designs: list[SampleDesign]
+    name: str
+    shared: bool
+    average: bool
+    first: dict[str, Any]
+    finish_weights: bool
+    finish_replicates: bool
 
-def _kind_faults(designs: list[SampleDesign], shared: bool) -> list[str]:
-    """In what the designs differ in kind."""
-    faults = []
-    libraries = {str(design.frame.implementation) for design in designs}
-    if len(libraries) > 1:
-        faults.append(f"the frames are of {len(libraries)} libraries; convert them to one.")
-    for role in ROLES:
-        counts = sorted({len(design.columns[role]) for design in designs})
-        if len(counts) > 1:
-            faults.append(f"they name different numbers of {role} columns ({some(counts)}).")
-    policies = [design.columns["single_cluster_strata"] for design in designs]
-    if any(policy != policies[0] for policy in policies):
-        faults.append("single_cluster_strata differs between them.")
-    elif isinstance(policies[0], Mapping) and not shared:
-        faults.append(
-            "single_cluster_strata is a mapping of strata, which are crossed with the wave here: "
-            "use 'collapse' or 'grand-mean'."
+    @classmethod
+    def of(cls, designs: list[SampleDesign], name: str, shared: bool, average: bool) -> _Plan:
+        decimals = {design.declared["weight_decimals"] for design in designs}
+        return cls(
+            designs,
+            name,
+            shared,
+            average,
+            designs[0].declared,
+            average or len(decimals) > 1,
+            needs_finished(designs, shared=shared, average=average),
         )
-    sets = [design.replicates for design in designs if design.replicates is not None]
-    if sets and len(sets) < len(designs):
-        faults.append("some waves have replicate weights and others do not.")
-    elif sets:
-        faults += _replicate_faults(sets, shared)
-    elif shared and not all(design.columns["clusters"] for design in designs):
-        faults.append("shared_clusters=True needs clusters: without them nothing is shared.")
-    return faults
+
+    @property
+    def over(self) -> int:
+        """What the weights are divided by."""
+        return len(self.designs) if self.average else 1
+
+    @property
+    def replicate_names(self) -> tuple[str, ...]:
+        """Names of the first wave's replicates."""
+        found = self.designs[0].replicates
+        return () if found is None else found.names
+
+    @property
+    def replaced(self) -> set[str]:
+        """Columns of the waves that are computed anew."""
+        found = {self.first["weight"]} if self.finish_weights and self.first["weight"] else set()
+        return found | {*(self.replicate_names if self.finish_replicates else ())}
+
+    @property
+    def needed(self) -> set[str]:
+        """Columns that are kept and must be of one type."""
+        found = {column for role in ROLES for column in self.first[role]}
+        found |= {*self.replicate_names, self.first["weight"]}
+        return found - self.replaced
+
+    @property
+    def strata(self) -> list[str] | None:
+        """Stratum columns of the stack."""
+        strata = list(self.first["strata"])
+        without_units = self.replicate_names and not strata and not self.first["clusters"]
+        if not self.shared and not without_units and self.name not in strata:
+            strata = [self.name, *strata]
+        return strata or None
+
+    def weight_name(self, taken: set[str]) -> str | None:
+        """Column of weights; averages of waves without weights get a new one."""
+        declared: str | None = self.first["weight"]
+        return _free("weight", taken) if declared is None and self.average else declared
+
+    def computed(self, taken: set[str]) -> tuple[dict[str, Any], Any]:
+        """Columns of replicates to add, and the set they make with those that are kept."""
+        if self.designs[0].replicates is None:
+            return {}, None
+        taken = {*taken, self.first["weight"]}
+        if not self.shared:
+            columns = side_by_side_columns(self.designs, taken, self.over)
+            return columns, side_by_side_set(self.designs, tuple(columns))
+        columns = shared_columns(self.designs, self.over) if self.finish_replicates else {}
+        return columns, shared_set(self.designs, finished=self.finish_replicates)
 
 
-def _replicate_faults(known: list[ReplicateSet], shared: bool) -> list[str]:
-    one = known[0]
-    if not shared:
-        on_mean = any(each.centre_on_mean for each in known)
-        return ["replicates centred on their mean cannot stand side by side."] if on_mean else []
-    faults = []
-    if {each.count for each in known} != {one.count}:
-        faults.append(f"they have {some([each.count for each in known])} replicates.")
-    elif any(
-        each.scheme != one.scheme
-        or each.centre_on_mean != one.centre_on_mean
-        or not np.allclose(each.coefficients, one.coefficients)
-        for each in known
-    ):
-        faults.append("their replicates differ in scheme, coefficients or centre.")
-    return faults
-
-
-def _columns(
-    designs: Mapping[str, SampleDesign], name: str
-) -> tuple[list[str], dict[str, dict[str, str]], list[str]]:
-    """Columns that all waves have, and under which name of its own each wave has them."""
-    first = next(iter(designs.values()))
-    wanted = [column for role in ROLES for column in first.columns[role]]
-    faults, renamed, present = [], {}, []
-    for label, design in designs.items():
-        frame = design.frame
-        own = {
-            mine: theirs
-            for role in ROLES
-            for mine, theirs in zip(first.columns[role], design.columns[role], strict=True)
-        }
-        hidden = {*own.values(), design.columns["weight"], *_replicate_names(design), name}
-        taken = [mine for mine, theirs in own.items() if mine != theirs and mine in frame.columns]
-        if taken:
-            faults.append(
-                f"wave {label!r} has columns {some(taken)} of another meaning; drop them."
-            )
-        if name in frame.columns and set(map(str, frame.get_column(name).unique())) != {label}:
-            faults.append(
-                f"wave {label!r} has a column {name!r} that holds other values than its label; "
-                "choose another name=."
-            )
-        renamed[label] = own
-        present.append([column for column in frame.columns if column not in hidden])
-    common = [column for column in present[0] if all(column in each for each in present)]
-    dropped = sorted({column for each in present for column in each} - set(common))
-    if dropped and not faults:
-        warn(f"Columns that not all waves have are left out: {some(dropped, 12)}.", DesignWarning)
-    return [*dict.fromkeys([*wanted, *common])], renamed, faults
-
-
-def _replicate_names(design: SampleDesign) -> tuple[str, ...]:
-    return () if design.replicates is None else design.replicates.names
-
-
-def _free(name: str, taken: list[str]) -> str:
+def _free(name: str, taken: set[str]) -> str:
     while name in taken:
         name += "_"
     return name
 
 
-def _part(
-    design: SampleDesign, columns: list[str], renamed: dict[str, str], weight: str, share: float
+def _roles(design: SampleDesign, shared: bool) -> list[str]:
+    """Design columns in a fixed order, so that those of two waves can be paired."""
+    declared = design.declared
+    found = [declared["weight"]] if declared["weight"] is not None else []
+    found += [column for role in ROLES for column in declared[role]]
+    if shared and design.replicates is not None:
+        found += design.replicates.names
+    return found
+
+
+def _prepared(
+    design: SampleDesign,
+    label: str,
+    first: SampleDesign,
+    name: str,
+    shared: bool,
+    faults: list[str],
 ) -> Frame:
-    """One wave's columns under the common names, with finished weights."""
-    frame = design.frame.select(
-        [nw.col(renamed.get(column, column)).alias(column) for column in columns]
-    )
-    return frame.with_columns(_series(frame, weight, design.weights * share))
-
-
-def _series(frame: Frame, name: str, values: Any) -> nw.Series[Any]:
-    implementation = frame.implementation
-    if implementation.is_pandas():
-        native = frame.to_native()
-        return nw.from_native(pd.Series(values, index=native.index, name=name), series_only=True)
-    return nw.new_series(name, values, backend=implementation)
-
-
-def _finished(design: SampleDesign, column: str, share: float) -> Any:
-    """One replicate as a finished weight, in the type of its column."""
-    replicates = design.replicates
-    assert replicates is not None  # noqa: S101 - the caller has looked
-    values = design.replicate_column(column)
-    factor = replicates.scale * share
-    if replicates.factors:
-        return values * (design.weights * factor)
-    if factor == 1.0:
-        return values
-    # Single precision stays single.
-    return values * (values.dtype.type(factor) if values.dtype.kind == "f" else factor)
-
-
-def _shared_replicates(
-    designs: Mapping[str, SampleDesign], parts: dict[str, Frame], share: float, taken: list[str]
-) -> tuple[dict[str, Frame], ReplicateWeights]:
-    """The same index is the same replicate: columns below each other."""
-    sets = {label: _set(design) for label, design in designs.items()}
-    first = next(iter(sets.values()))
-    names = list(first.names)
-    if set(names) & set(taken):
-        prefix = _prefix(taken)
-        names = [f"{prefix}{number}" for number in range(1, first.count + 1)]
-    added = {}
-    for label, design in designs.items():
-        frame = parts[label]
-        columns = [
-            _series(frame, name, _finished(design, own, share))
-            for name, own in zip(names, sets[label].names, strict=True)
-        ]
-        added[label] = frame.with_columns(*columns)
-    declared = ReplicateWeights(
-        names,
-        "coefficients",
-        coefficients=first.coefficients.tolist(),
-        centre="replicate-mean" if first.centre_on_mean else "full-sample",
-        df=min(each.df for each in sets.values()),
-        may_leave_out=first.may_leave_out,
-    )
-    return added, declared
-
-
-def _side_by_side(
-    designs: Mapping[str, SampleDesign], parts: dict[str, Frame], share: float, taken: list[str]
-) -> tuple[dict[str, Frame], ReplicateWeights]:
-    """Independent sets: in the replicates of one wave the others keep their full weight."""
-    sets = {label: _set(design) for label, design in designs.items()}
-    prefix = _prefix(taken)
-    owners = [(label, own) for label, each in sets.items() for own in each.names]
-    names = [f"{prefix}{number}" for number in range(1, len(owners) + 1)]
-    added = {}
-    for label, design in designs.items():
-        frame, full = parts[label], design.weights * share
-        columns = [
-            _series(frame, name, _finished(design, own, share) if owner == label else full)
-            for name, (owner, own) in zip(names, owners, strict=True)
-        ]
-        added[label] = frame.with_columns(*columns)
-    declared = ReplicateWeights(
-        names,
-        "coefficients",
-        coefficients=np.concatenate([each.coefficients for each in sets.values()]).tolist(),
-        df=sum(each.df for each in sets.values()),
-        may_leave_out=all(each.may_leave_out for each in sets.values()),
-    )
-    return added, declared
-
-
-def _set(design: SampleDesign) -> ReplicateSet:
-    assert design.replicates is not None  # noqa: S101 - the caller has looked
-    return design.replicates
-
-
-def _prefix(taken: list[str]) -> str:
-    prefix = "replicate_"
-    while any(column.startswith(prefix) for column in taken):
-        prefix += "_"
-    return prefix
-
-
-def _stacked(parts: Mapping[str, Frame], name: str) -> Any:
-    """The waves below each other; the column of waves keeps their order where it can."""
-    labels = list(parts)
-    frames = [part.with_columns(nw.lit(label).alias(name)) for label, part in parts.items()]
+    """One wave's frame under the first wave's names, without what the stack makes anew."""
+    frame = design.frame
+    theirs, ours = _roles(design, shared), _roles(first, shared)
+    if design.replicates is not None and not shared:
+        frame = frame.drop([column for column in design.replicates.names if column not in theirs])
+    if len(theirs) == len(ours):
+        frame = _renamed(frame, label, theirs, ours, faults)
+    if name not in frame.columns:
+        return frame
+    declared = first.declared
+    if name in {declared["weight"], *declared["clusters"], *declared["population"]}:
+        if design is first:
+            faults.append(f"{name!r} is a column of the design: choose another name=.")
+        return frame
     try:
-        stacked = nw.concat(frames, how="vertical")
-    except Exception as problem:
-        reason = str(problem).splitlines()[0] if str(problem) else type(problem).__name__
-        raise DesignError(
-            f"The waves' columns cannot be put below each other: {reason}. Give them one type."
-        ) from problem
-    native = stacked.to_native()
-    if isinstance(native, pd.DataFrame):
-        native = native.reset_index(drop=True)
-        native[name] = pd.Categorical(native[name], categories=labels, ordered=True)
-        return native
-    if stacked.implementation.is_polars():
-        return stacked.with_columns(nw.col(name).cast(nw.Enum(labels))).to_native()
-    return native
+        coded = code_column(frame, name, "name")
+        found = {str(coded.levels[code]) if code >= 0 else None for code in np.unique(coded.codes)}
+    except ColumnFault:
+        found = {None}
+    if found != {label}:
+        faults.append(
+            f"wave {label!r} has a column {name!r} already, which says something else than "
+            f"{label!r}: choose another name=, or another label."
+        )
+    return frame.drop(name)
+
+
+def _renamed(
+    frame: Frame, label: str, theirs: list[str], ours: list[str], faults: list[str]
+) -> Frame:
+    new_name = dict(zip(theirs, ours, strict=True))
+    pairs = set(zip(theirs, ours, strict=True))
+    if len(pairs) > len(new_name) or len(pairs) > len(set(ours)):
+        faults.append(
+            f"wave {label!r} uses one column in two roles of the design where the first wave uses "
+            "two, or the reverse. Give each role a column of its own."
+        )
+        return frame
+    changed = {old: new for old, new in new_name.items() if old != new}
+    clash = [new for new in changed.values() if new in frame.columns and new not in changed]
+    if clash:
+        faults.append(
+            f"wave {label!r} has columns {some(clash)}, but these are names of the first wave's "
+            "design columns, and other columns take these roles here. Rename or drop them."
+        )
+        return frame
+    return frame.rename(changed) if changed else frame
+
+
+def _tell_left_out(missing: list[str], unlike: list[str]) -> None:
+    parts = []
+    if missing:
+        parts.append(
+            f"{len(missing)} columns are not in every wave and are left out of the stack: "
+            f"{some(missing)}."
+        )
+    if unlike:
+        parts.append(
+            f"{len(unlike)} columns are of different types in the waves and are left out of the "
+            f"stack: {some(unlike)}. Convert them first if they are wanted."
+        )
+    if parts:
+        warn(" ".join(parts), DesignWarning)
+
+
+def _question_sharing(combined: SampleDesign, sizes: list[int]) -> None:
+    """Warn where no sampling unit is in two waves: the codes may not mean what was said."""
+    tree = combined.tree
+    if not tree.parent or combined.replicates is not None:
+        return
+    unit = tree.ancestor(1)[tree.leaf]
+    n_waves = np.zeros(tree.parent[0].size, dtype=np.intp)
+    for rows in np.split(unit, np.cumsum(sizes)[:-1]):
+        n_waves[np.unique(rows[rows >= 0])] += 1
+    if n_waves.size and n_waves.max() < 2:
+        warn(
+            f"shared_clusters=True, but none of the {n_waves.size} clusters is in two waves. Are "
+            "the codes of strata and clusters written alike in all waves?",
+            DesignWarning,
+        )

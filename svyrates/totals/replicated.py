@@ -50,6 +50,10 @@ class ReplicatedSpread:
         """The function under every replicate."""
         return replace(self, values=function.value(self.values), centre=function.value(at))
 
+    def picked(self, chosen: IntArray) -> ReplicatedSpread:
+        """The spread of some elements, in the order chosen."""
+        return replace(self, values=self.values[:, chosen], centre=self.centre[chosen])
+
     def gaps(self) -> FloatArray:
         """Share of the replicates in which each element is undefined, shape (k,)."""
         missing = np.isnan(self.values).mean(axis=0)
@@ -62,9 +66,14 @@ class ReplicatedSpread:
         Replicates of every scheme do. Their mean is tested against the estimate by a t statistic
         that chance, or the bias of a ratio, does not bring to these bounds (common practice).
         """
-        defined = ~np.isnan(self.values)
+        beyond = [self._astray(self.values[rows]) for rows, _ in self.replicates.sets]
+        return np.asarray(np.any(beyond, axis=0))
+
+    def _astray(self, values: FloatArray) -> NDArray[np.bool_]:
+        """The same for the replicates of one set, shape (replicates of the set, k)."""
+        defined = ~np.isnan(values)
         count = defined.sum(axis=0)
-        away = np.where(defined, self.values - self.centre, 0.0)
+        away = np.where(defined, values - self.centre, 0.0)
         with np.errstate(invalid="ignore", divide="ignore"):
             mean = away.sum(axis=0) / count
             about_mean = (away**2).sum(axis=0) / count - mean**2
@@ -79,7 +88,7 @@ class ReplicatedSpread:
         """
         usable = self._usable()
         missing = np.asarray(np.isnan(self.values[:, usable]).any(axis=1))
-        if missing.mean() > MOST_LEFT_OUT:
+        if not self._enough(missing):
             usable &= self.gaps() == 0.0
             missing = np.asarray(np.isnan(self.values[:, usable]).any(axis=1))
         kept = ~missing
@@ -120,8 +129,15 @@ class ReplicatedSpread:
             return np.where(squares > 0, by_stratum.sum(axis=0) ** 2 / squares, np.nan)
 
     def _usable(self) -> NDArray[np.bool_]:
-        most = MOST_LEFT_OUT if self.replicates.may_leave_out else 0.0
-        return ~np.isnan(self.centre) & (self.gaps() <= most)
+        return ~np.isnan(self.centre) & self._enough(np.isnan(self.values))
+
+    def _enough(self, missing: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Whether every set misses few enough of its replicates; `missing` (replicates, ...)."""
+        enough = [
+            missing[rows].mean(axis=0) <= (MOST_LEFT_OUT if may_leave_out else 0.0)
+            for rows, may_leave_out in self.replicates.sets
+        ]
+        return np.asarray(np.all(enough, axis=0))
 
     def _away(self, values: FloatArray, centre: Any, kept: NDArray[np.bool_]) -> FloatArray:
         if self.replicates.centre_on_mean and kept.any():
@@ -129,8 +145,11 @@ class ReplicatedSpread:
         return np.asarray(values - centre)
 
     def _coefficients(self, kept: NDArray[np.bool_]) -> FloatArray:
-        n_kept = max(int(kept.sum()), 1)
-        return np.asarray(self.replicates.coefficients[kept] * (kept.size / n_kept))
+        scaled = self.replicates.coefficients.copy()
+        # Sets side by side are independent: what one leaves out, the others cannot stand in for.
+        for rows, _ in self.replicates.sets:
+            scaled[rows] *= kept[rows].size / max(int(kept[rows].sum()), 1)
+        return scaled[kept]
 
 
 @dataclass(frozen=True)

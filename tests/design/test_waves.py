@@ -1,250 +1,309 @@
-"""Waves in one design: independent samples, shared clusters, and replicates of both kinds."""
+"""Waves: independent samples add their variances, shared clusters keep their covariance."""
 
 from __future__ import annotations
 
-import warnings
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 import pandas as pd
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 import svyrates as sr
+from tests import reference
+from tests.design.small_waves import (
+    EXACT,
+    LABELS,
+    assert_independent,
+    change_of,
+    each_alone,
+    one_design,
+    one_frame,
+    two_waves,
+)
+from tests.reference import Record, Survey
 
-WAVES = ("2021", "2024")
+pl = pytest.importorskip("polars")
+pa = pytest.importorskip("pyarrow")
 
-
-def _designs(**options: Any) -> dict[str, sr.SampleDesign]:
-    arguments = {"weight": "wt", "strata": "district", "clusters": "block"} | options
-    return {wave: sr.SampleDesign(sr.demo_survey(wave), **arguments) for wave in WAVES}
-
-
-def _change(design: sr.SampleDesign, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(sr.estimate_rates(design, "damp", by="wave"), **options)
-
-
-def test_independent_waves_add_their_variances() -> None:
-    designs = _designs()
-    both = sr.combine_waves(designs)
-    rates = sr.estimate_rates(both, "damp", by="wave")
-    alone = [sr.estimate_rates(design, "damp") for design in designs.values()]
-    assert [label[0] for label in rates.groups] == list(WAVES)
-    np.testing.assert_allclose(rates.rate, [one.rate[0] for one in alone], rtol=1e-13)
-    np.testing.assert_allclose(rates.se, [one.se[0] for one in alone], rtol=1e-12)
-    gaps = _change(both)
-    assert gaps.se[0] ** 2 == pytest.approx(sum(one.variance[0] for one in alone), rel=1e-12)
-    assert gaps.correlation[0] == pytest.approx(0.0, abs=1e-12)
-    assert both.n_units == 224
+R = sr.ReplicateWeights
 
 
-def test_shared_clusters_keep_the_covariance_by_plain_loops() -> None:
-    both = sr.combine_waves(_designs(), shared_clusters=True)
-    found = sr.estimate_rates(both, "damp", by="wave").covariance.to_numpy()
-    data = sr.demo_survey()
-    z = []
-    for wave in WAVES:
-        mine = (data["wave"] == wave).to_numpy()
-        w, y = data["wt"].to_numpy(), data["damp"].to_numpy()
-        p = (w * y)[mine].sum() / w[mine].sum()
-        z.append(np.where(mine, w * (y - p) / w[mine].sum(), 0.0))
-    total = np.zeros((2, 2))
-    for _, stratum in data.groupby("district"):
-        units = [
-            np.array([column[block.index].sum() for column in z])
-            for _, block in stratum.groupby("block")
-        ]
-        mean = sum(units) / len(units)
-        scale = len(units) / (len(units) - 1)
-        total += scale * sum(np.outer(unit - mean, unit - mean) for unit in units)
-    np.testing.assert_allclose(found, total, rtol=1e-10)
-    assert abs(found[0, 1]) > 0.1 * found[0, 0]
+@pytest.mark.parametrize(
+    "options",
+    [
+        {},
+        {"strata": None},
+        {"clusters": None},
+        {"strata": None, "clusters": None},
+        {"weight": None},
+    ],
+)
+def test_variances_of_independent_waves_add_up(options: dict[str, Any]) -> None:
+    assert_independent(two_waves(**options))
 
 
-def test_treating_shared_waves_as_independent_is_seen() -> None:
-    """What lasts in a block is in both waves; only the design with shared blocks knows."""
-    shared = _change(sr.combine_waves(_designs(), shared_clusters=True))
-    apart = _change(sr.combine_waves(_designs()))
-    assert shared.estimate[0] == pytest.approx(apart.estimate[0])
-    assert shared.se[0] < 0.95 * apart.se[0]
-    assert shared.variance_sources()["covariance"][0] < 1
-    assert shared.simple_se[0] == pytest.approx(apart.simple_se[0])
-
-
-def _with_replicates(seeds: tuple[int, int]) -> dict[str, sr.SampleDesign]:
-    return {
-        wave: sr.make_replicates(design, "bootstrap", count=30, seed=seed)
-        for (wave, design), seed in zip(_designs().items(), seeds, strict=True)
+def test_finite_populations_stay_with_their_wave() -> None:
+    waves = {
+        label: one_design(one_frame(7 + i).assign(N=6 + 5 * i), population="N")
+        for i, label in enumerate(LABELS)
     }
+    assert_independent(waves)
 
 
-@pytest.mark.parametrize("average", [False, True])
-def test_independent_replicates_stand_side_by_side(average: bool) -> None:
-    designs = _with_replicates((1, 2))
-    both = sr.combine_waves(designs, average_weights=average)
-    assert both.replicates.count == 60
-    assert both.replicates.df == sum(design.replicates.df for design in designs.values())
-    alone = [sr.estimate_rates(design, "damp") for design in designs.values()]
-    gaps = _change(both)
-    assert gaps.se[0] ** 2 == pytest.approx(sum(one.variance[0] for one in alone), rel=1e-9)
-    assert both.sum_of_weights == pytest.approx(694_000 * (1 if average else 2), rel=1e-9)
+def _record(row: Any, wave: int) -> Record:
+    groups = tuple(wave == i for i in range(2))
+    return Record(row.w, (row.y,), groups, (row.s, row.c))
 
 
-def test_shared_replicates_have_the_same_index() -> None:
-    """Jackknife replicates of the stacked sample, or stacked replicates of the waves: the same."""
-    stacked = sr.combine_waves(_designs(), shared_clusters=True)
-    expected = _change(sr.make_replicates(stacked, "stratified-jackknife"))
-    designs = {
-        wave: sr.make_replicates(design, "stratified-jackknife")
-        for wave, design in _designs().items()
+def _plain(waves: dict[str, sr.SampleDesign]) -> np.ndarray:
+    """Covariance of the two rates by loops over records, clusters shared by their codes."""
+    records = [
+        _record(row, i)
+        for i, design in enumerate(waves.values())
+        for row in design.frame.to_native().itertuples()
+    ]
+    survey = Survey(records, n_cluster_stages=1, records_last=False)
+    return reference.covariance(survey, [reference.scores(survey, 0, group) for group in (0, 1)])
+
+
+@settings(max_examples=25)
+@given(st.integers(1, 10_000), st.integers(2, 5), st.integers(2, 5))
+def test_shared_clusters_keep_their_covariance(seed: int, first: int, second: int) -> None:
+    """The waves may have some clusters in common and others not."""
+    waves = {
+        "2021": one_design(one_frame(seed, clusters=first)),
+        "2024": one_design(one_frame(seed + 1, clusters=second, strata="abcd")),
     }
-    both = sr.combine_waves(designs, shared_clusters=True)
-    assert both.replicates.count == 112
-    assert not both.replicates.may_leave_out
-    gaps = _change(both)
-    assert gaps.se[0] == pytest.approx(expected.se[0], rel=1e-9)
-    assert gaps.correlation[0] == pytest.approx(expected.correlation[0], rel=1e-9)
+    rates = sr.estimate_rates(sr.combine_waves(waves, shared_clusters=True), "y", by="wave")
+    expected = _plain(waves)
+    np.testing.assert_allclose(rates.covariance, expected, rtol=1e-9, atol=1e-15)
+    assert abs(expected[0, 1]) > 1e-9
 
 
-def test_factors_and_decimals_become_finished_weights() -> None:
-    designs = _with_replicates((1, 2))
-    plain = sr.combine_waves(designs, shared_clusters=True)
-    later = designs["2024"].frame.to_native().copy()
-    names = list(designs["2024"].replicates.names)
-    later[names] = later[names].div(later["wt"], axis=0)
-    later["wt"] = later["wt"] * 100
-    factors = sr.SampleDesign(
-        later.rename(columns={"wt": "weight_2024", "district": "area", "block": "unit"}),
-        weight="weight_2024", weight_decimals=2, strata="area", clusters="unit",
-        replicates=sr.ReplicateWeights(names, "bootstrap", factors=True),
-    )  # fmt: skip
-    mixed = sr.combine_waves(designs | {"2024": factors}, shared_clusters=True)
-    assert _change(mixed).se[0] == pytest.approx(_change(plain).se[0], rel=1e-9)
-
-
-def test_average_weights_change_no_rate_of_a_wave() -> None:
+@settings(max_examples=15)
+@given(st.integers(1, 10_000), st.booleans())
+def test_order_of_waves_only_turns_the_sign(seed: int, shared: bool) -> None:
+    waves = two_waves(first=seed)
+    turned = dict(reversed(waves.items()))
     one, other = (
-        sr.combine_waves(_designs(), shared_clusters=True, average_weights=average)
-        for average in (False, True)
-    )
-    assert other.sum_of_weights == pytest.approx(694_000)
-    for by in ("wave", None):
-        rates = [sr.estimate_rates(design, "damp", by=by) for design in (one, other)]
-        np.testing.assert_allclose(rates[0].rate, rates[1].rate, rtol=1e-12)
-        np.testing.assert_allclose(rates[0].se, rates[1].se, rtol=1e-12)
-
-
-def test_the_order_of_waves_only_turns_the_sign() -> None:
-    designs = _designs()
-    forward = sr.combine_waves(designs, shared_clusters=True)
-    backward = sr.combine_waves(dict(reversed(designs.items())), shared_clusters=True)
-    one, other = _change(forward), _change(backward)
-    assert one.estimate[0] == pytest.approx(-other.estimate[0])
-    assert one.se[0] == pytest.approx(other.se[0], rel=1e-12)
-    assert (one.group, other.group) == (("2021",), ("2024",))
-
-
-@pytest.mark.parametrize("library", ["polars", "pyarrow"])
-@pytest.mark.parametrize("replicated", [False, True])
-def test_other_frames(library: str, replicated: bool) -> None:
-    module = pytest.importorskip(library)
-    convert = module.from_pandas if library == "polars" else module.Table.from_pandas
-    source = _with_replicates((1, 2)) if replicated else _designs()
-    expected = _change(sr.combine_waves(source))
-    designs = {}
-    for wave, design in source.items():
-        data = design.frame.to_native().drop(columns="wave")
-        declared = sr.ReplicateWeights("replicate_*", "bootstrap") if replicated else None
-        designs[wave] = sr.SampleDesign(
-            convert(data), weight="wt", strata="district", clusters="block", replicates=declared
+        change_of(
+            sr.estimate_rates(sr.combine_waves(given, shared_clusters=shared), "y", by="wave"),
+            versus="2021",
         )
-    found = _change(sr.combine_waves(designs))
-    assert found.se[0] == pytest.approx(expected.se[0], rel=1e-9)
-    assert found.group == expected.group
-
-
-def test_lone_strata_and_populations_go_along() -> None:
-    designs = _designs(population="blocks_in_district", single_cluster_strata="collapse")
-    both = sr.combine_waves(designs)
-    alone = sum(sr.estimate_rates(design, "damp").variance[0] for design in designs.values())
-    assert _change(both).se[0] ** 2 == pytest.approx(alone, rel=1e-12)
-
-
-def test_columns_of_some_waves_are_left_out() -> None:
-    designs = _designs()
-    later = sr.demo_survey("2024").assign(new=1)
-    designs["2024"] = sr.SampleDesign(later, weight="wt", strata="district", clusters="block")
-    with pytest.warns(sr.DesignWarning, match="left out: 'new'"):
-        both = sr.combine_waves(designs)
-    assert "new" not in both.frame.columns
-
-
-def _fault(designs: Any, message: str, **options: Any) -> None:
-    with pytest.raises(sr.DesignError, match=message):
-        sr.combine_waves(designs, **options)
-
-
-def test_what_does_not_fit_together() -> None:
-    designs = _designs()
-    data = sr.demo_survey("2024")
-    _fault({"2021": designs["2021"]}, "two waves or more")
-    _fault([designs["2021"]], "two waves or more")
-    _fault({"a": designs["2021"], "b": data}, r"waves 'b' are no SampleDesign")
-    _fault(designs, "name must be the name of a column", name="")
-    polars = pytest.importorskip("polars")
-    _fault(designs | {"2024": sr.SampleDesign(polars.from_pandas(data))}, "2 libraries")
-    _fault(designs | {"2024": sr.SampleDesign(data, weight="wt")}, "numbers of strata columns")
-    replicated = _with_replicates((1, 2))
-    _fault(designs | {"2024": replicated["2024"]}, "some waves have replicate weights")
-    policy = _designs(single_cluster_strata="collapse")
-    _fault(designs | {"2024": policy["2024"]}, "single_cluster_strata differs")
-    mapped = {"single_cluster_strata": {"a": "b"}}
-    _fault(_designs(**mapped), "a mapping of strata")
-    bare = {wave: sr.SampleDesign(sr.demo_survey(wave), weight="wt") for wave in WAVES}
-    _fault(bare, "shared_clusters=True needs clusters", shared_clusters=True)
-    _fault(designs, "has a column 'sex' that holds other values", name="sex")
-    renamed = sr.SampleDesign(
-        data.rename(columns={"block": "unit"}).assign(block=1),
-        weight="wt", strata="district", clusters="unit",
-    )  # fmt: skip
-    _fault(designs | {"2024": renamed}, "columns 'block' of another meaning")
-    odd = data.assign(damp="yes")
-    types = sr.SampleDesign(
-        polars.from_pandas(odd), weight="wt", strata="district", clusters="block"
+        for given in (waves, turned)
     )
-    first = sr.SampleDesign(
-        polars.from_pandas(sr.demo_survey("2021")), weight="wt", strata="district", clusters="block"
+    back = change_of(
+        sr.estimate_rates(sr.combine_waves(turned, shared_clusters=shared), "y", by="wave"),
+        versus="2024",
     )
-    _fault({"2021": first, "2024": types}, "cannot be put below each other")
+    np.testing.assert_allclose(one.estimate, other.estimate, rtol=1e-9)
+    np.testing.assert_allclose(one.estimate, -back.estimate, rtol=1e-9)
+    np.testing.assert_allclose(one.se, back.se, rtol=1e-9)
 
 
-def test_replicates_that_do_not_fit_together() -> None:
-    designs = _with_replicates((1, 2))
-    file = designs["2024"].frame.to_native()
-    names = list(designs["2024"].replicates.names)
+def test_the_verdict_sees_the_shared_clusters() -> None:
+    """In the demo survey people of the same blocks are alike in both waves."""
+    waves = {
+        label: sr.SampleDesign(
+            sr.demo_survey(label), weight="wt", strata="district", clusters="block"
+        )
+        for label in LABELS
+    }
+    shared, independent = (
+        change_of(
+            sr.estimate_rates(sr.combine_waves(waves, shared_clusters=how), "damp", by="wave")
+        )
+        for how in (True, False)
+    )
+    np.testing.assert_allclose(shared.estimate, independent.estimate, rtol=1e-10)
+    assert shared.correlation[0] > 0.3
+    assert abs(independent.correlation[0]) < 1e-9
+    assert shared.variance_ratio[0] < 0.8 * independent.variance_ratio[0]
+    assert shared.verdict[0] != independent.verdict[0]
 
-    def other(columns: list[str], *arguments: Any, **options: Any) -> dict[str, sr.SampleDesign]:
-        declared = sr.ReplicateWeights(columns, *arguments, **options)
-        fits = {"weight": "wt", "strata": "district", "clusters": "block"}
-        return designs | {"2024": sr.SampleDesign(file, **fits, replicates=declared)}
 
-    few = other(names[:20], "bootstrap")
-    _fault(few, "they have 30, 20 replicates", shared_clusters=True)
-    with pytest.warns(sr.DesignWarning, match="'replicate_21'"):
-        assert sr.combine_waves(few).replicates.count == 50
-    _fault(other(names, "successive-difference"), "differ in scheme", shared_clusters=True)
-    on_mean = other(names, "bootstrap", centre="replicate-mean")
-    _fault(on_mean, "centred on their mean cannot stand side by side")
+def test_the_stack_of_the_demo_survey_is_the_demo_survey() -> None:
+    arguments: dict[str, Any] = {"weight": "wt", "strata": "district", "clusters": "block"}
+    waves = {label: sr.SampleDesign(sr.demo_survey(label), **arguments) for label in LABELS}
+    stacked = sr.combine_waves(waves, shared_clusters=True)
+    whole = sr.SampleDesign(sr.demo_survey(), **arguments)
+    one, other = (sr.estimate_rates(d, "damp", by=["wave", "tenure"]) for d in (stacked, whole))
+    np.testing.assert_allclose(one.covariance, other.covariance, **EXACT)
+    assert one.groups == other.groups
 
 
-def test_single_precision_stays_single() -> None:
-    designs = {}
-    for wave, design in _with_replicates((1, 2)).items():
-        names = list(design.replicates.names)
-        data = design.frame.to_native().astype(dict.fromkeys(names, np.float32))
-        declared = sr.ReplicateWeights("replicate_*", "bootstrap")
-        designs[wave] = sr.SampleDesign(data, weight="wt", replicates=declared)
-    both = sr.combine_waves(designs, shared_clusters=True, average_weights=True)
-    frame: pd.DataFrame = both.frame.to_native()
-    assert {str(frame[name].dtype) for name in both.replicates.names} == {"float32"}
+def test_pooled_rates_are_weighted_and_averages_keep_them() -> None:
+    waves = two_waves()
+    totals = [design.sum_of_weights for design in waves.values()]
+    each = [table.rate[0] for table in each_alone(waves)]
+    for average in (False, True):
+        combined = sr.combine_waves(waves, average_weights=average)
+        rates = sr.estimate_rates(combined, "y")
+        assert rates.rate[0] == pytest.approx(np.average(each, weights=totals), rel=1e-12)
+        expected = np.mean(totals) if average else np.sum(totals)
+        assert combined.sum_of_weights == pytest.approx(expected, rel=1e-12)
+    by_wave = sr.estimate_rates(combined, "y", by="wave")
+    np.testing.assert_allclose(by_wave.rate, each, rtol=1e-12)
+    np.testing.assert_allclose(by_wave.se, [t.se[0] for t in each_alone(waves)], rtol=1e-10)
+
+
+def test_an_average_without_weights_has_a_weight_of_its_own() -> None:
+    data = [one_frame(seed).assign(weight="taken") for seed in (1, 2)]
+    waves = {label: one_design(d, weight=None) for label, d in zip(LABELS, data, strict=True)}
+    combined = sr.combine_waves(waves, average_weights=True)
+    np.testing.assert_array_equal(combined.weights, 0.5)
+    assert combined.declared["weight"] == "weight_"
+
+
+KINDS: dict[str, Callable[[pd.DataFrame], Any]] = {
+    "pandas": lambda data: data,
+    "pandas nullable": lambda data: data.convert_dtypes(),
+    "polars": pl.from_pandas,
+    "polars lazy": lambda data: pl.from_pandas(data).lazy(),
+    "pyarrow": lambda data: pa.Table.from_pandas(data, preserve_index=False),
+}
+
+
+@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize("replicated", [False, True])
+def test_every_library(kind: str, replicated: bool) -> None:
+    """Labels out of their alphabetical order, categories of different sets, text and integers."""
+
+    def waves(convert: Callable[[pd.DataFrame], Any]) -> dict[str, sr.SampleDesign]:
+        made = {}
+        for seed, label in ((1, "later"), (2, "earlier")):
+            data = one_frame(seed).assign(t=lambda d: d["g"])
+            data["t"] = data["t"].astype("category" if seed == 1 else object)
+            data["u"] = pd.Categorical(data["g"], ["z", "y", "x"] if seed == 1 else ["x", "y"])
+            data["v"] = data["y"] + (0.0 if seed == 1 else 1.5)
+            data["y"] = data["y"].astype(np.int64 if seed == 1 else np.int8)
+            design = one_design(data)
+            if replicated:
+                data = sr.make_replicates(design, "stratified-jackknife").frame.to_native()
+                options = {
+                    "replicates": R("replicate_*", "stratified-jackknife", units_per_stratum=4)
+                }
+                made[label] = one_design(convert(data), **options)
+            else:
+                made[label] = one_design(convert(data))
+        return made
+
+    for shared in (True, False):
+        combined = sr.combine_waves(waves(KINDS[kind]), shared_clusters=shared)
+        expected = sr.combine_waves(waves(lambda data: data), shared_clusters=shared)
+        assert type(combined.frame.to_native()) is type(
+            KINDS[kind](one_frame(1)) if kind != "polars lazy" else pl.DataFrame()
+        )
+        found = sr.estimate_rates(combined, "y", by="wave")
+        truth = sr.estimate_rates(expected, "y", by="wave")
+        order = [1, 0] if kind == "pyarrow" else [0, 1]
+        assert truth.groups == (("later",), ("earlier",))
+        assert found.groups == tuple(truth.groups[i] for i in order)
+        matrix = truth.covariance.to_numpy()[np.ix_(order, order)]
+        np.testing.assert_allclose(found.covariance, matrix, **EXACT)
+        for column in ("t", "u", "v"):
+            values = combined.frame.get_column(column).to_list()
+            assert values == expected.frame.get_column(column).to_list()
+    if kind == "pandas":
+        assert list(expected.frame.to_native()["u"].cat.categories) == ["z", "y", "x"]
+        assert expected.frame.to_native()["wave"].cat.ordered
+
+
+@pytest.mark.parametrize("convert", [KINDS["polars"], KINDS["pyarrow"]])
+def test_categories_of_the_library_are_joined(convert: Callable[[pd.DataFrame], Any]) -> None:
+    frames = []
+    for seed, levels in ((1, ["y", "x"]), (2, ["x", "y", "z"])):
+        data = one_frame(seed)
+        frame = convert(data.assign(g=pd.Categorical(data["g"], levels)))
+        if isinstance(frame, pl.DataFrame):
+            frame = frame.with_columns(pl.col("g").cast(pl.String).cast(pl.Enum(levels)))
+        frames.append(frame)
+    waves = {label: one_design(frame) for label, frame in zip(LABELS, frames, strict=True)}
+    rates = sr.estimate_rates(sr.combine_waves(waves), "y", by="g")
+    labels = [label for (label,) in rates.groups]
+    assert labels == (["y", "x", "z"] if isinstance(frames[0], pl.DataFrame) else ["x", "y"])
+
+
+def test_other_names_and_decimals_in_another_wave() -> None:
+    data = one_frame(2)
+    other = data.rename(columns={"s": "c", "c": "s", "w": "weight_2024"})
+    other["weight_2024"] *= 100
+    same = sr.combine_waves(two_waves(), shared_clusters=True)
+    waves = {
+        "2021": one_design(one_frame(1)),
+        "2024": sr.SampleDesign(
+            other, weight="weight_2024", weight_decimals=2, strata="c", clusters="s"
+        ),
+    }
+    renamed = sr.combine_waves(waves, shared_clusters=True)
+    one, two = (sr.estimate_rates(d, "y", by="wave").covariance for d in (same, renamed))
+    np.testing.assert_allclose(one, two, rtol=1e-9)
+    assert set(renamed.frame.columns) == {"wave", "s", "c", "w", "g", "y"}
+    assert set(other.columns) == {"s", "c", "weight_2024", "g", "y"}
+
+
+def test_columns_of_some_waves_are_left_out_with_a_warning() -> None:
+    frames = [one_frame(1).assign(a=1, b=1, z=True), one_frame(2).assign(b="1", d=2, z=False)]
+    waves = {label: one_design(d) for label, d in zip(LABELS, frames, strict=True)}
+    with pytest.warns(sr.DesignWarning) as caught:
+        combined = sr.combine_waves(waves)
+    (message,) = (str(one.message) for one in caught)
+    assert "2 columns are not in every wave and are left out of the stack: 'a', 'd'" in message
+    assert "1 columns are of different types in the waves" in message
+    assert combined.frame.columns == ["wave", "s", "c", "w", "g", "y", "z"]
+
+
+@pytest.mark.parametrize("held", [2021, "2021", 2021.0])
+def test_a_column_that_says_the_label_already_is_replaced(held: object) -> None:
+    frames = [one_frame(1).assign(wave=held), one_frame(2)]
+    waves = {label: one_design(d) for label, d in zip(LABELS, frames, strict=True)}
+    rates = sr.estimate_rates(sr.combine_waves(waves), "y", by="wave")
+    assert rates.groups == (("2021",), ("2024",))
+
+
+def test_strata_that_name_the_wave_already() -> None:
+    plain = sr.estimate_rates(sr.combine_waves(two_waves()), "y", by="wave")
+    waves = {
+        label: one_design(one_frame(1 + i).assign(wave=label), strata=["s", "wave"])
+        for i, label in enumerate(LABELS)
+    }
+    combined = sr.combine_waves(waves)
+    assert combined.declared["strata"] == ("s", "wave")
+    found = sr.estimate_rates(combined, "y", by="wave")
+    np.testing.assert_allclose(found.covariance, plain.covariance, **EXACT)
+
+
+def _lone(seed: int, where: str) -> pd.DataFrame:
+    data = one_frame(seed, strata="abcde")
+    return data[(data["c"] == 0) | ~data["s"].isin(list(where))].reset_index(drop=True)
+
+
+@pytest.mark.parametrize(
+    ("policies", "where"),
+    [
+        (("collapse", "collapse"), ("b", "c")),
+        (("collapse", "collapse"), ("abc", "d")),
+        (("collapse", {"e": "a"}), ("abcd", "e")),
+        (({"b": "c"}, {"d": "e", "a": "e"}), ("b", "da")),
+        (("grand-mean", "grand-mean"), ("ab", "c")),
+        (("self-representing", "self-representing"), ("a", "ab")),
+    ],
+)
+def test_single_clusters_are_joined_within_waves(policies: Any, where: Any) -> None:
+    waves = {
+        label: one_design(_lone(3 + i, where[i]), single_cluster_strata=policies[i])
+        for i, label in enumerate(LABELS)
+    }
+    assert_independent(waves)
+
+
+def test_shared_policies_are_passed_on() -> None:
+    waves = {
+        label: one_design(_lone(3 + i, "bc"), single_cluster_strata="collapse")
+        for i, label in enumerate(LABELS)
+    }
+    combined = sr.combine_waves(waves, shared_clusters=True)
+    assert combined.joined_strata == (("b", "c"),)
