@@ -44,7 +44,14 @@ if TYPE_CHECKING:
         RatesWarning,
         SimpleFormulaWarning,
     )
-    from svyrates.rates import RateTable, estimate_rates, rates_from_published
+    from svyrates.rates import (
+        ModelTable,
+        RateTable,
+        adjusted_rates,
+        estimate_rates,
+        rates_from_published,
+        standardize_rates,
+    )
 
 __version__ = "0.1.0"
 
@@ -60,6 +67,7 @@ __all__ = [
     "DesignSummary",
     "DesignWarning",
     "HomogeneityTable",
+    "ModelTable",
     "QuestionError",
     "RateTable",
     "RatesError",
@@ -67,6 +75,7 @@ __all__ = [
     "ReplicateWeights",
     "SampleDesign",
     "SimpleFormulaWarning",
+    "adjusted_rates",
     "combine_waves",
     "common_difference",
     "compare_rates",
@@ -79,6 +88,7 @@ __all__ = [
     "make_replicates",
     "merge_replicates",
     "rates_from_published",
+    "standardize_rates",
     "trend_test",
 ]
 
@@ -117,7 +127,14 @@ _HOMES = {
         "RatesWarning",
         "SimpleFormulaWarning",
     ),
-    "svyrates.rates": ("RateTable", "estimate_rates", "rates_from_published"),
+    "svyrates.rates": (
+        "ModelTable",
+        "RateTable",
+        "adjusted_rates",
+        "estimate_rates",
+        "rates_from_published",
+        "standardize_rates",
+    ),
 }
 _HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 

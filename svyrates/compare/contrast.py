@@ -10,13 +10,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.compare.contrast_table import ContrastTable, assemble_contrasts
-from svyrates.compare.contrasts import SCALES, combine, joint_wald
+from svyrates.compare.contrasts import SCALES, combine
 from svyrates.compare.hypothesis import Hypothesis
 from svyrates.compare.multiplicity import MULTIPLICITY, Multiplicity
 from svyrates.compare.pairs import matches
 from svyrates.compare.simple import VARIANTS, SimpleVariant
 from svyrates.errors import ComparisonError, all_faults, some
 from svyrates.rates.table import RateTable
+from svyrates.totals import joint_wald
 
 __all__ = ["contrast", "difference_in_differences", "read_options"]
 

@@ -11,13 +11,14 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from svyrates.compare.conclusions import conclusions, finding
-from svyrates.compare.contrasts import Combined, WaldTest
+from svyrates.compare.contrasts import Combined
 from svyrates.compare.families import adjusted
 from svyrates.compare.hypothesis import Hypothesis
 from svyrates.compare.layout import family_lines
 from svyrates.compare.verdict import MEANINGS, meaning
 from svyrates.rates.layout import footnotes, machine_column
 from svyrates.rates.table import RateTable
+from svyrates.totals import WaldTest
 from svyrates.words import Column, Table, Tabular, fixed, p_phrase, p_value, points, significant
 
 __all__ = ["ContrastTable", "assemble_contrasts"]

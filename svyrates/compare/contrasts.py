@@ -7,10 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import special
 
 from svyrates.compare.families import Tests
-from svyrates.compare.hypothesis import Hypothesis, normal_df, two_sided
+from svyrates.compare.hypothesis import Hypothesis, normal_df
 from svyrates.compare.measures import MEASURES, Scale
 from svyrates.compare.simple import (
     ENOUGH_VARIANCE,
@@ -22,12 +21,12 @@ from svyrates.compare.simple import (
 )
 from svyrates.compare.verdict import LITTLE_POWER_DF, judge
 from svyrates.errors import ComparisonError
-from svyrates.rates.limits import t_quantile
+from svyrates.rates.limits import t_p_value, t_quantile
 from svyrates.rates.source import SideRates, freedom_of
 from svyrates.rates.table import RateTable
 from svyrates.totals import ZERO, Linear
 
-__all__ = ["SCALES", "Combined", "WaldTest", "combine", "fetch_rates", "joint_wald"]
+__all__ = ["SCALES", "Combined", "combine", "fetch_rates"]
 
 FloatArray = NDArray[np.float64]
 SCALES: dict[str, Scale] = {
@@ -36,20 +35,6 @@ SCALES: dict[str, Scale] = {
     "logit": MEASURES["odds_ratio"],
 }
 _FEW_DF = 8
-
-
-@dataclass(frozen=True, slots=True)
-class WaldTest:
-    """Joint test of several contrasts: F with `df1` and `df2` degrees of freedom.
-
-    `F = (df - q + 1)/(df q) · d'V⁻¹d` on `q` and `df - q + 1` (Korn & Graubard 1990); NaN with too
-    few degrees of freedom or a contrast without variance.
-    """
-
-    f: float
-    df1: float
-    df2: float
-    p: float
 
 
 @dataclass(frozen=True)
@@ -122,7 +107,7 @@ def combine(
     simple = _simple(found, weights, chosen, asked, variant, df, estimate, true)
     tests = Tests(
         p=p,
-        equality_p=two_sided(statistic, df),
+        equality_p=t_p_value(statistic, df),
         se=se,
         df=df,
         covariance=lambda: joint[:m, :m] * np.outer(slope[:m], slope[:m]),
@@ -138,28 +123,6 @@ def combine(
         _notes(found, weights, undefined, df, se, simple, no_variance),
         tests,
     )  # fmt: skip
-
-
-def joint_wald(estimate: FloatArray, covariance: FloatArray, df: float) -> WaldTest:
-    """Whether several contrasts are all zero; contrasts that repeat others do not count."""
-    nothing = WaldTest(*[float("nan")] * 4)
-    if not np.isfinite(covariance).all() or not np.isfinite(estimate).all():
-        return nothing
-    scale = np.sqrt(covariance.diagonal())
-    if (scale == 0.0).any():
-        return nothing
-    values, vectors = np.linalg.eigh(covariance / np.outer(scale, scale))
-    kept = values > 1e-9 * values[-1]
-    q = float(kept.sum())
-    df2 = df - q + 1.0
-    if not df2 > 0:
-        return WaldTest(float("nan"), q, df2, float("nan"))
-    along = vectors[:, kept].T @ (estimate / scale)
-    square = float((along**2 / values[kept]).sum())
-    if np.isinf(df):
-        return WaldTest(square / q, q, df2, float(special.chdtrc(q, square)))
-    f = square * df2 / (df * q)
-    return WaldTest(f, q, df2, float(special.fdtrc(q, df2, f)))
 
 
 def fetch_rates(rates: RateTable, rows: Sequence[int]) -> tuple[SideRates, FloatArray, str]:

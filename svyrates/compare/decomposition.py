@@ -13,12 +13,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.compare.decomposition_table import DecompositionTable
-from svyrates.compare.hypothesis import two_sided
 from svyrates.compare.pairs import matches
 from svyrates.design import SampleDesign
 from svyrates.errors import QuestionError, some
 from svyrates.rates.cells import cell_name, read_cells
-from svyrates.rates.limits import t_quantile
+from svyrates.rates.limits import t_p_value, t_quantile
 from svyrates.rates.source import freedom_of
 from svyrates.totals import ByComplexStep, blocks
 
@@ -96,7 +95,7 @@ def gap_decomposition(
     first, second = [i for i, _ in pairs], [j for _, j in pairs]
     filled = cells.n > 0
     kitagawa = _Kitagawa(filled, first, second)
-    found = cells.source.smooth(ByComplexStep(kitagawa))
+    found = cells.source.totals().apply(ByComplexStep(kitagawa))
     with np.errstate(invalid="ignore"):
         se = np.sqrt(found.variance())
     groups = cells.source.sides(cells.unions())
@@ -125,7 +124,7 @@ def gap_decomposition(
         high=(found.values + half)[rows],
         statistic=statistic[rows],
         df=freedom[rows],
-        p=two_sided(statistic, freedom)[rows],
+        p=t_p_value(statistic, freedom)[rows],
         share=share[rows],
         subject=f"{cells.outcome.name} = {cells.outcome.defined}",
         by=by,

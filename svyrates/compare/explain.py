@@ -204,7 +204,7 @@ def _why(table: ComparisonTable, row: int, steps: FloatArray) -> str:
             if not MEASURES[table.measure].is_log
             else (f"a factor of {fixed(float(np.exp(table.shift[row])), 2)}")
         )
-        sentences.append(
-            f"Leaving the weights out shifts it by {by} ({p_phrase(table.shift_p[row])})."
-        )
+        out = "the weights" if table.rates.crude_rate is None else "the weights and the adjustment"
+        p = p_phrase(table.shift_p[row])
+        sentences.append(f"Leaving {out} out shifts it by {by} ({p}).")
     return " ".join(sentences)

@@ -15,13 +15,14 @@ from numpy.typing import NDArray
 from scipy import special
 
 from svyrates.compare.contrast import read_options
-from svyrates.compare.contrasts import fetch_rates, joint_wald
+from svyrates.compare.contrasts import fetch_rates
 from svyrates.compare.homogeneity_table import HomogeneityTable
 from svyrates.compare.pairs import by_level, held_columns
 from svyrates.compare.verdict import TOLERANCE, outside_chi_square
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.source import SideRates
 from svyrates.rates.table import RateTable
+from svyrates.totals import joint_wald
 
 __all__ = ["homogeneity_test"]
 
@@ -57,8 +58,8 @@ def homogeneity_test(
     Raises
     ------
     ComparisonError
-        For fewer than two groups, overlapping groups (but for the Wald test), and options out of
-        range.
+        For fewer than two groups, overlapping groups or adjusted rates (but for the Wald test), and
+        options out of range.
 
     Notes
     -----
@@ -88,6 +89,10 @@ def homogeneity_test(
         raise ComparisonError(
             "The groups overlap, and Rao and Scott's tests need groups that do not: use "
             "method='wald'."
+        )
+    if rates.crude_rate is not None and method != "wald":
+        raise ComparisonError(
+            "Rao and Scott's tests are of crude rates, and these are adjusted: use method='wald'."
         )
     names = ["outcome", *rates.columns]
     rows = [(outcome, *labels) for outcome in rates.outcomes for labels in rates.groups]

@@ -15,6 +15,7 @@ from scipy import special
 
 from svyrates.compare.measures import MEASURES
 from svyrates.errors import some
+from svyrates.rates.limits import t_p_value, t_tail
 
 __all__ = [
     "ALTERNATIVES",
@@ -22,7 +23,6 @@ __all__ = [
     "Hypothesis",
     "normal_df",
     "read_hypothesis",
-    "two_sided",
 ]
 
 FloatArray = NDArray[np.float64]
@@ -80,8 +80,8 @@ class Hypothesis:
             above = np.where(se > 0, (estimate - self.low) / se, np.nan)
             below = np.where(se > 0, (estimate - self.high) / se, np.nan)
         if self.side == "two-sided":
-            return above, two_sided(above, df)
-        over, under = _upper_tail(above, df), _upper_tail(-below, df)
+            return above, t_p_value(above, df)
+        over, under = t_tail(above, df), t_tail(-below, df)
         if self.side == "greater":
             return above, over
         if self.side == "less":
@@ -108,19 +108,6 @@ class Hypothesis:
 def normal_df(like: FloatArray) -> FloatArray:
     """Infinite degrees of freedom, where Student's t is the normal."""
     return np.full(np.shape(like), np.inf)
-
-
-def two_sided(statistic: FloatArray, df: FloatArray) -> FloatArray:
-    """Two-sided p-value of Student's t; the normal's at infinite df, NaN without df."""
-    return np.minimum(2.0 * _upper_tail(np.abs(statistic), df), 1.0)
-
-
-def _upper_tail(statistic: FloatArray, df: FloatArray) -> FloatArray:
-    with np.errstate(invalid="ignore"):
-        usable = df > 0
-    tail = special.stdtr(np.where(usable & np.isfinite(df), df, 1.0), -statistic)
-    tail = np.where(np.isinf(df), special.ndtr(-statistic), tail)
-    return np.where(usable, tail, np.nan)
 
 
 def read_hypothesis(

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from svyrates.compare.conclusions import conclusions
 from svyrates.compare.explain import warn_if_misleading
 from svyrates.compare.families import Family, Tests, adjusted
-from svyrates.compare.hypothesis import Alternative, Hypothesis, read_hypothesis, two_sided
+from svyrates.compare.hypothesis import Alternative, Hypothesis, read_hypothesis
 from svyrates.compare.measures import MEASURES, Measure, Scale
 from svyrates.compare.multiplicity import MULTIPLICITY, Multiplicity
 from svyrates.compare.notes import comparison_notes
@@ -22,7 +22,7 @@ from svyrates.compare.simple import VARIANTS, SimpleVariant, simple_formula
 from svyrates.compare.table import ComparisonTable
 from svyrates.compare.verdict import judge
 from svyrates.errors import ComparisonError, all_faults, some
-from svyrates.rates.limits import t_quantile
+from svyrates.rates.limits import t_p_value, t_quantile
 from svyrates.rates.table import RateTable
 
 __all__ = ["compare_rates"]
@@ -267,7 +267,7 @@ def _compare_block(
     side_slope = np.where(np.isfinite(side_slope), side_slope, 0.0)
     tests = Tests(
         p=p,
-        equality_p=two_sided(_ratio(estimate, se), df),
+        equality_p=t_p_value(_ratio(estimate, se), df),
         se=se,
         df=df,
         covariance=lambda: (

@@ -13,9 +13,10 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-from svyrates.compare.hypothesis import Hypothesis, normal_df, two_sided
+from svyrates.compare.hypothesis import Hypothesis, normal_df
 from svyrates.compare.measures import MEASURES, Scale
 from svyrates.compare.sides import Joint
+from svyrates.rates.limits import t_p_value
 
 __all__ = [
     "VARIANTS",
@@ -210,7 +211,7 @@ def counted_shift(
         # Rounding alone separates the two where all weights are equal.
         shift = np.where(np.abs(shift) < 1e-12 * (np.abs(plain) + np.abs(weighted)), 0.0, shift)
         statistic = np.where(shift == 0.0, 0.0, shift / np.sqrt(variance))
-    shift_p = np.where(np.isfinite(statistic), two_sided(statistic, df), np.nan)
+    shift_p = np.where(np.isfinite(statistic), t_p_value(statistic, df), np.nan)
     counted = shift_p < 1.0 - level
     b = np.where(counted, np.sqrt(np.maximum(shift**2 - variance, 0.0)), 0.0)
     return shift, shift_p, np.copysign(b, shift)

@@ -11,9 +11,9 @@ from numpy.typing import NDArray
 
 from svyrates.compare.contrast import OneSided, read_options
 from svyrates.compare.contrast_table import ContrastTable, assemble_contrasts
-from svyrates.compare.contrasts import Combined, WaldTest, combine, joint_wald
+from svyrates.compare.contrasts import Combined, combine
 from svyrates.compare.families import Tests
-from svyrates.compare.hypothesis import Hypothesis, normal_df, two_sided
+from svyrates.compare.hypothesis import Hypothesis, normal_df
 from svyrates.compare.multiplicity import Multiplicity
 from svyrates.compare.pairs import by_level, held_columns, matches
 from svyrates.compare.simple import (
@@ -25,10 +25,10 @@ from svyrates.compare.simple import (
 from svyrates.compare.verdict import judge
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.crude import CrudeRates
-from svyrates.rates.limits import t_quantile
+from svyrates.rates.limits import t_p_value, t_quantile
 from svyrates.rates.source import freedom_of
 from svyrates.rates.table import RateTable
-from svyrates.totals import ByComplexStep, blocks
+from svyrates.totals import ByComplexStep, WaldTest, blocks, joint_wald
 
 __all__ = ["common_difference"]
 
@@ -138,7 +138,7 @@ def _common(
 ) -> Combined:
     """Common differences of all pairs; `cells` is (levels, groups)."""
     first, second = cells[:, [i for i, _ in pairs]], cells[:, [j for _, j in pairs]]
-    estimates = source.smooth(ByComplexStep(lambda at: _mantel_haenszel(at, first, second)))
+    estimates = source.totals().apply(ByComplexStep(lambda at: _mantel_haenszel(at, first, second)))
     q = len(pairs)
     covariance = estimates.covariance()
     weighted, plain = np.split(estimates.values, 2)
@@ -165,7 +165,7 @@ def _common(
     left_out = [int((~used).sum()) for used in of_pair]
     notes = [f"{k} levels with an empty group are left out" if k else "" for k in left_out]
     tests = Tests(
-        p, two_sided(statistic, df), se, df, lambda: covariance[:q, :q], np.eye(q), limits_at
+        p, t_p_value(statistic, df), se, df, lambda: covariance[:q, :q], np.eye(q), limits_at
     )
     return Combined(
         weighted, se, low, high, statistic, df, p, covariance[:q, :q], simple,

@@ -16,7 +16,6 @@ from svyrates.totals import (
     RatesOfSides,
     ReplicateSupport,
     ReplicateTotals,
-    SmoothFunction,
     Spread,
     Support,
     UnitSupport,
@@ -85,14 +84,13 @@ class CrudeRates:
         """Cells in the block."""
         return self.units.n_cells
 
+    def totals(self, kind: SpreadKind = "design") -> Estimates:
+        """Estimates of the totals `[n | y | N | Y]` of the cells."""
+        return Estimates(self.units.totals, self._spread(kind))
+
     def estimates(self, sides: Any, kind: SpreadKind = "design") -> Estimates:
         """Estimates of `[rate | unweighted]` of each row of `sides` (m, cells)."""
-        totals = Estimates(self.units.totals, self._spread(kind))
-        return totals.apply(RatesOfSides(sides))
-
-    def smooth(self, function: SmoothFunction) -> Estimates:
-        """Estimates of a smooth function of the totals `[n | y | N | Y]` of the cells."""
-        return Estimates(self.units.totals, self.units.spread).apply(function)
+        return self.totals(kind).apply(RatesOfSides(sides))
 
     def sides(self, sides: Any) -> SideRates:
         """Rates of each row of `sides` (m, cells), a signed sum of cells."""

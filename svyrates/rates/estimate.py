@@ -8,15 +8,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from svyrates.design import SampleDesign
-from svyrates.errors import DesignWarning, some, warn
-from svyrates.rates.crude import CrudeRates
-from svyrates.rates.limits import INTERVALS, Interval, rate_limits
+from svyrates.errors import some
+from svyrates.rates.assemble import Asked, assemble, measure
+from svyrates.rates.limits import INTERVALS, Interval
 from svyrates.rates.question import (
     Grouping,
 )
-from svyrates.rates.source import variances
 from svyrates.rates.table import RateBlock, RateTable
-from svyrates.rates.tallied import Tallied, check_design, tally_question
+from svyrates.rates.tallied import TalliedBlock, check_design, tally_question
 
 __all__ = ["estimate_rates"]
 
@@ -99,11 +98,20 @@ def estimate_rates(
     check_rule(design, df, faults)
     tallied = tally_question(design, outcome, success, by, where, faults, joint=joint)
     rule = usual_rule(design, df)
-    parts = [
-        _measure(block.source, len(block.outcomes), tallied.grouping, rule)
-        for block in tallied.blocks
-    ]
-    return _assemble(design, tallied, parts, interval, level, rule)
+    parts = [_measure(block, tallied.grouping, rule) for block in tallied.blocks]
+    asked = Asked(
+        outcomes=tuple(outcome.name for outcome in tallied.outcomes),
+        success=tuple(outcome.defined for outcome in tallied.outcomes),
+        columns=tallied.grouping.columns,
+        groups=tallied.grouping.labels,
+        coverage=tallied.coverage,
+        overlapping=tallied.grouping.overlapping,
+        interval=interval,
+        level=level,
+        df_rule=rule,
+    )
+    blocks = tuple(RateBlock(block.outcomes, block.source) for block in tallied.blocks)
+    return assemble(design, asked, blocks, parts)
 
 
 def usual_rule(design: SampleDesign, df: str | float | None) -> str | float:
@@ -141,120 +149,14 @@ def check_options(interval: str, level: float, df: str | float | None, faults: l
         faults.append(f"df must be one of {some(DF_RULES)} or a positive number; got {df!r}.")
 
 
-def _measure(
-    source: CrudeRates, n_outcomes: int, grouping: Grouping, df: str | float | None
-) -> dict[str, FloatArray]:
-    """Everything about the rows of one block but their limits, outcomes slowest."""
+def _measure(block: TalliedBlock, grouping: Grouping, rule: str | float) -> dict[str, FloatArray]:
+    """Rates of one block, outcomes slowest."""
+    source = block.source
     n_cells = grouping.membership.shape[1]
     cells = [
         position * n_cells + group
-        for position in range(n_outcomes)
+        for position in range(len(block.outcomes))
         for group in range(grouping.n_groups)
     ]
-    found = source.sides(source.rows_of(cells))
     n_missing = source.units.by_cell(source.units.tally.n, answered=False)[cells]
-    variance, df_values = variances(found, source, df)
-    return {
-        "n": found.n,
-        "n_success": found.y,
-        "n_missing": n_missing,
-        "weighted_n": found.weighted_n,
-        "rate": found.rate,
-        "se": np.sqrt(variance),
-        "df": df_values,
-        "kish_factor": found.kish_factor,
-        "unweighted_rate": found.unweighted,
-        "gaps": found.stacked.spread.gaps()[: found.n.size],
-        "astray": found.stacked.spread.astray()[: found.n.size],
-    }
-
-
-def _assemble(
-    design: SampleDesign,
-    tallied: Tallied,
-    parts: list[dict[str, FloatArray]],
-    interval: str,
-    level: float,
-    df_rule: str | float,
-) -> RateTable:
-    outcomes, grouping = tallied.outcomes, tallied.grouping
-    joined: dict[str, Any] = {
-        name: np.concatenate([part[name] for part in parts]) for name in parts[0]
-    }
-    with np.errstate(invalid="ignore", divide="ignore"):
-        n_star = joined["rate"] * (1.0 - joined["rate"]) / joined["se"] ** 2
-    notes = _notes(joined, interval)
-    _question_replicates(joined.pop("gaps"), joined.pop("astray") > 0, joined["se"], design)
-    low, high = rate_limits(joined["rate"], joined["n"], n_star, joined["df"], interval, level)
-    return RateTable(
-        outcomes=tuple(outcome.name for outcome in outcomes),
-        success=tuple(outcome.defined for outcome in outcomes),
-        columns=grouping.columns,
-        groups=grouping.labels,
-        low=low,
-        high=high,
-        notes=notes,
-        interval=interval,
-        level=level,
-        df_rule=df_rule,
-        coverage=tallied.coverage,
-        weights_are_relative=design.weights_are_relative,
-        overlapping=grouping.overlapping,
-        blocks=tuple(RateBlock(block.outcomes, block.source) for block in tallied.blocks),
-        **joined,
-    )
-
-
-def _question_replicates(
-    gaps: FloatArray, astray: NDArray[np.bool_], se: FloatArray, design: SampleDesign
-) -> None:
-    """Say where replicates were left out, and where they do not lie about the estimate."""
-    if design.replicates is None:
-        return
-    left_out = (gaps > 0) & ~np.isnan(se)
-    count = design.replicates.count
-    if left_out.any():
-        most = round(float(gaps[left_out].max()) * count)
-        warn(
-            f"{int(left_out.sum())} rates are undefined in some replicates (at most {most} of "
-            f"{count}): those replicates are left out of their variances, which are scaled up.",
-            DesignWarning,
-        )
-    if astray.any():
-        warn(
-            f"{int(astray.sum())} of {astray.size} rates differ from the mean of their replicates "
-            "by more than the replicates differ from each other. Are these the columns that belong "
-            "to this weight, and all of them? Standard errors cannot be trusted before that is "
-            "settled.",
-            DesignWarning,
-        )
-
-
-def _notes(found: dict[str, FloatArray], interval: str) -> tuple[str, ...]:
-    """What a reader must know about each row."""
-    rate, se, n, df = found["rate"], found["se"], found["n"], found["df"]
-    certain = (rate == 0.0) | (rate == 1.0)
-    stand_in = " by Clopper–Pearson" if interval in ("wald", "logit", "arcsine") else ""
-    conditions = [
-        ((n == 0) & (found["n_missing"] == 0), "no members"),
-        ((n == 0) & (found["n_missing"] > 0), "no member has a known outcome"),
-        (
-            certain,
-            f"rate of exactly 0 or 1: no variance, limits{stand_in} use n, review it first",
-        ),
-        (
-            ~certain & (n > 0) & np.isnan(se) & (found["gaps"] > 0),
-            "the rate is undefined in too many replicates: its variance is unknown",
-        ),
-        (
-            ~certain & (n > 0) & np.isnan(se) & (found["gaps"] == 0),
-            "all members in one sampling unit: its variance cannot be estimated",
-        ),
-        (
-            ~certain & (n > 0) & ~np.isnan(se) & ~(df > 0),
-            "no degrees of freedom: one sampling unit with members in each stratum, no limits",
-        ),
-        (~certain & (se == 0.0), "the standard error is zero"),
-    ]
-    notes = [[text for flag, text in conditions if flag[row]] for row in range(rate.size)]
-    return tuple("; ".join(row) for row in notes)
+    return measure(source, cells, n_missing, rule)

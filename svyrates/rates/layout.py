@@ -65,6 +65,8 @@ def rate_layout(rates: RateTable, *, percent: bool, every_column: bool) -> Table
         "df": np.isinf(rates.df).all(),
     }
     columns = [column for column in columns if not idle.get(column.name, False)]
+    if rates.crude_rate is not None:
+        columns.append(_numbers("crude_rate", "crude rate", rates.crude_rate, show))
     if any(marks):
         columns.append(Column("note", "note", marks))
     return Table(_title(rates), tuple(columns), (*remarks, *_about(rates)))

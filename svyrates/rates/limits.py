@@ -21,7 +21,15 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-__all__ = ["INTERVALS", "Interval", "adjusted_size", "rate_limits", "t_quantile"]
+__all__ = [
+    "INTERVALS",
+    "Interval",
+    "adjusted_size",
+    "rate_limits",
+    "t_p_value",
+    "t_quantile",
+    "t_tail",
+]
 
 FloatArray = NDArray[np.float64]
 Limits = tuple[FloatArray, FloatArray]
@@ -42,6 +50,20 @@ def t_quantile(df: FloatArray, level: float) -> FloatArray:
     quantile = special.stdtrit(np.where(usable & np.isfinite(df), df, 1.0), upper)
     quantile = np.where(np.isinf(df), special.ndtri(upper), quantile)
     return np.where(usable, quantile, np.nan)
+
+
+def t_tail(statistic: FloatArray, df: FloatArray) -> FloatArray:
+    """Upper tail of Student's t; the normal's at infinite df, NaN below any df."""
+    with np.errstate(invalid="ignore"):
+        usable = df > 0
+    tail = special.stdtr(np.where(usable & np.isfinite(df), df, 1.0), -statistic)
+    tail = np.where(np.isinf(df), special.ndtr(-statistic), tail)
+    return np.where(usable, tail, np.nan)
+
+
+def t_p_value(statistic: FloatArray, df: FloatArray) -> FloatArray:
+    """Two-sided p-value of Student's t."""
+    return np.minimum(2.0 * t_tail(np.abs(statistic), df), 1.0)
 
 
 def adjusted_size(n: FloatArray, n_star: FloatArray, df: FloatArray, level: float) -> FloatArray:

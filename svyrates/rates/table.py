@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from svyrates.errors import ComparisonError
 from svyrates.rates.layout import rate_layout
+from svyrates.rates.model_table import ModelTable
 from svyrates.rates.source import RateSource
 from svyrates.words import Table, Tabular
 
@@ -73,6 +74,8 @@ class RateTable(Tabular):
     df_rule : how degrees of freedom were counted
     coverage : which records the table speaks of; None where that is not known
     kind : what kind of rates these are, "" for crude ones
+    crude_rate : the weighted rate before any adjustment; None where `rate` is that
+    model : the regression behind adjusted rates; None for all others
     remarks : what must be said under every table made of these rates
 
     Examples
@@ -114,6 +117,8 @@ class RateTable(Tabular):
     blocks: tuple[RateBlock, ...]
     kind: str = ""
     remarks: tuple[str, ...] = ()
+    crude_rate: FloatArray | None = None
+    model: ModelTable | None = None
 
     def what(self, outcome: int) -> str:
         """An outcome in words, such as "damp = 1, standardised for age"."""
@@ -202,7 +207,7 @@ class RateTable(Tabular):
         pandas.DataFrame
             The label columns, then `n`, `n_success`, `n_missing`, `weighted_n`, `rate`, `se`,
             `low`, `high`, `df`, `design_effect`, `n_effective`, `kish_factor`, `rse`,
-            `unweighted_rate` and `note`.
+            `unweighted_rate`, `crude_rate` where `rate` is adjusted, and `note`.
         """
         names, rows = self.label_columns()
         data: dict[str, Any] = {
@@ -216,6 +221,8 @@ class RateTable(Tabular):
             "kish_factor", "rse", "unweighted_rate",
         ):  # fmt: skip
             data[name] = getattr(self, name)
+        if self.crude_rate is not None:
+            data["crude_rate"] = self.crude_rate
         data["note"] = list(self.notes)
         return pd.DataFrame(data)
 
@@ -229,7 +236,7 @@ class RateTable(Tabular):
         return all(
             _same(getattr(self, each.name), getattr(other, each.name))
             for each in fields(self)
-            if each.name != "blocks"
+            if each.name not in ("blocks", "model")
         )
 
     __hash__ = None  # type: ignore[assignment]

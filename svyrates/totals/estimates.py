@@ -39,6 +39,10 @@ class Spread(Protocol):
         """The spread of `function` of the vector."""
         ...
 
+    def picked(self, chosen: IntArray) -> Spread:
+        """The spread of some elements, in the order chosen."""
+        ...
+
     def covariance(self) -> FloatArray:
         """Covariance matrix, shape (k, k)."""
         ...

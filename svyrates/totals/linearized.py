@@ -6,7 +6,7 @@ them.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from typing import Any
 
@@ -47,6 +47,10 @@ class LinearizedSpread:
         if sparse.issparse(rows):
             rows = lighter(rows.tocsr())
         return LinearizedSpread(rows, self.weight, self.stratum, self.n_units)
+
+    def picked(self, chosen: IntArray) -> LinearizedSpread:
+        """The spread of some elements, in the order chosen."""
+        return replace(self, rows=self.rows[:, chosen])
 
     def covariance(self) -> FloatArray:
         """Covariance matrix, shape (k, k)."""

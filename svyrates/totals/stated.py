@@ -34,6 +34,10 @@ class StatedSpread:
         carried[:, lost] = np.nan
         return StatedSpread(carried)
 
+    def picked(self, chosen: IntArray) -> StatedSpread:
+        """The spread of some elements, in the order chosen."""
+        return StatedSpread(self.matrix[np.ix_(chosen, chosen)])
+
     def covariance(self) -> FloatArray:
         """Covariance matrix, shape (k, k)."""
         return self.matrix.copy()

@@ -68,9 +68,9 @@ class UnitTotals(CellTotals):
     def unstratified(self) -> LinearizedSpread:
         """Spread if the first-stage units were drawn with replacement from one stratum."""
         rows = [self._node_totals(1)] if self.tree.parent else []
-        in_pool = np.isin(self.tally.leaf, self._pools(0))
-        if in_pool.any():
-            rows.append(self.records_as_units(in_pool))
+        pools = self._pools(0)
+        if pools.size:
+            rows.append(self._records_of(pools)[0])
         return about_mean(rows, self.totals, int(self.tree.n_children[0].sum()))
 
     def _pools(self, depth: int) -> IntArray:
@@ -132,7 +132,7 @@ class UnitTotals(CellTotals):
         pools = self._pools(depth)
         if not pools.size:
             return []
-        tree, tally = self.tree, self.tally
+        tree = self.tree
         parts: list[Part] = []
         scale, stratum = self._scale(depth), self._stratum_of(depth)
         if depth == 0 and tree.centre_on_all.any():
@@ -141,14 +141,19 @@ class UnitTotals(CellTotals):
                 self._about_all_units(self.leaves[pools[lone]], tree.leaf_node[pools[lone]])
             )
             pools = pools[~lone]
-        mine = np.isin(tally.leaf, pools)
-        pairs = (tally.atom[mine], tally.n[mine], tally.w[mine], tally.ww[mine])
-        rows, node = self.moments(pairs, tree.leaf_node[tally.leaf[mine]])
+        rows, node = self._records_of(pools)
         parts.append((rows, scale[node], stratum[node]))
         nodes = tree.leaf_node[pools]
         m = tree.n_children[depth][nodes].astype(np.float64)
         parts.append((scaled(1.0 / np.sqrt(m), self.leaves[pools]), -scale[nodes], stratum[nodes]))
         return parts
+
+    def _records_of(self, pools: IntArray) -> tuple[Any, IntArray]:
+        """Rows whose squares are the second moments of the records of pools, and their nodes."""
+        tally = self.tally
+        mine = np.isin(tally.leaf, pools)
+        pairs = (tally.atom[mine], tally.n[mine], tally.w[mine], tally.ww[mine])
+        return self.moments(pairs, self.tree.leaf_node[tally.leaf[mine]])
 
 
 def _gathered(target: IntArray, n_targets: int, chosen: IntArray, rows: Any) -> Any:

@@ -1,0 +1,147 @@
+"""From a formula and the columns it names to a model matrix, and the same with a column changed."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from svyrates.design.columns import Codes, Frame, code_column, column, fault_or, numbers
+from svyrates.errors import QuestionError, all_faults
+from svyrates.rates.formula import ParsedFormula
+
+__all__ = ["ModelColumns", "ModelMatrix", "build_matrix", "read_model_columns"]
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True)
+class ModelColumns:
+    """Columns of a formula.
+
+    Attributes
+    ----------
+    values : name -> numbers (records,) or coded labels
+    known : (records,) where all of them have a value
+    """
+
+    values: dict[str, FloatArray | Codes]
+    known: BoolArray
+
+    def categorical(self, name: str, kept: NDArray[np.intp]) -> Any:
+        """One column of some records, as patsy takes it."""
+        found = self.values[name]
+        if not isinstance(found, Codes):
+            return found[kept]
+        codes = found.codes[kept]
+        occurring = np.bincount(codes, minlength=len(found.levels)) > 0
+        number = np.cumsum(occurring) - 1
+        levels = [str(level) for level, here in zip(found.levels, occurring, strict=True) if here]
+        return pd.Categorical.from_codes(number[codes].tolist(), categories=pd.Index(levels))
+
+
+def read_model_columns(
+    frame: Frame, names: tuple[str, ...], by: str | None, faults: list[str]
+) -> ModelColumns:
+    """Read the columns of a formula; `by` is read as labels whatever its type."""
+    values: dict[str, FloatArray | Codes] = {}
+    known = np.ones(len(frame), dtype=bool)
+    for name in names:
+        series = fault_or(faults, column, frame, name, "formula")
+        if series is None:
+            continue
+        if series.dtype.is_numeric() and name != by:
+            found = fault_or(faults, numbers, frame, name, "formula")
+            if found is not None:
+                values[name] = found
+                known &= np.isfinite(found)
+            continue
+        coded = fault_or(faults, code_column, frame, name, "formula")
+        if coded is not None:
+            values[name] = coded
+            known &= coded.codes >= 0
+    return ModelColumns(values, known)
+
+
+@dataclass(frozen=True, slots=True)
+class ModelMatrix:
+    """A model matrix that can be built again with one column changed.
+
+    Attributes
+    ----------
+    matrix : (rows, k)
+    names : (k,) names of its columns
+    terms : name -> positions of its columns, the intercept left out
+    """
+
+    matrix: FloatArray
+    names: tuple[str, ...]
+    terms: dict[str, slice]
+    _info: Any
+    _data: dict[str, Any]
+
+    def categories(self, key: str) -> list[str]:
+        """Levels of a categorical column that occur."""
+        return [str(level) for level in self._data[key].categories]
+
+    def codes(self, key: str) -> NDArray[np.intp]:
+        """Which of them each row has, (rows,)."""
+        return np.asarray(self._data[key].codes, dtype=np.intp)
+
+    def with_level(self, key: str, level: object) -> FloatArray:
+        """The matrix with a categorical column set to one level in every row."""
+        from patsy import build_design_matrices
+
+        data = dict(self._data)
+        own = data[key]
+        codes = np.full(len(own), own.categories.get_loc(str(level)), dtype=np.intp)
+        data[key] = pd.Categorical.from_codes(codes.tolist(), categories=own.categories)
+        return np.asarray(build_design_matrices([self._info], data)[0], dtype=np.float64)
+
+
+def build_matrix(
+    parsed: ParsedFormula, columns: ModelColumns, kept: NDArray[np.intp]
+) -> ModelMatrix:
+    """Model matrix of some records."""
+    from patsy import EvalEnvironment, PatsyError, dmatrix
+
+    data = {f"x{i}": columns.categorical(name, kept) for i, name in enumerate(parsed.columns)}
+    # Nothing of the caller's can be seen from here.
+    names_at_hand = EvalEnvironment([{"log": np.log, "exp": np.exp, "sqrt": np.sqrt}])
+    try:
+        with np.errstate(all="ignore"):
+            built = dmatrix(parsed.right, data, eval_env=names_at_hand, NA_action="raise")
+    except PatsyError as problem:
+        reason = _readable(str(problem).splitlines()[0], parsed)
+        raise QuestionError(f"The formula {parsed.text!r} cannot be built: {reason}.") from problem
+    matrix = np.asarray(built, dtype=np.float64)
+    faults = []
+    bad = int(np.count_nonzero(~np.isfinite(matrix).all(axis=1)))
+    if bad:
+        faults.append(f"terms are infinite or undefined in {bad} records, such as log of 0.")
+    all_faults(QuestionError, f"The formula {parsed.text!r} has", faults)
+    info = built.design_info
+    names = tuple(_coefficient(name, parsed) for name in info.column_names)
+    terms = {
+        _readable(name, parsed): where
+        for name, where in info.term_name_slices.items()
+        if name != "Intercept"
+    }
+    return ModelMatrix(matrix, names, terms, info, data)
+
+
+def _coefficient(name: str, parsed: ParsedFormula) -> str:
+    """Name of a coefficient, such as "tenure = owner × age"."""
+    plain = re.sub(r"C\((x\d+)[^)]*\)+\[", r"\1[", name)
+    parts = re.sub(r"\[(?:T\.)?(.*?)\](?=:|$)", r" = \1", plain).split(":")
+    return " × ".join(_readable(part, parsed) for part in parts)
+
+
+def _readable(text: str, parsed: ParsedFormula) -> str:
+    """Put the columns' own names back."""
+    return re.sub(r"\bx(\d+)\b", lambda match: parsed.columns[int(match[1])], text)
