@@ -1,5 +1,6 @@
 """Comparisons of rates, and the verdict on the simple independent-sample formula."""
 
+from svyrates.compare.adjustment import AdjustmentTable, compare_adjustment
 from svyrates.compare.contrast import contrast, difference_in_differences
 from svyrates.compare.contrast_table import ContrastTable
 from svyrates.compare.decomposition import gap_decomposition
@@ -15,11 +16,13 @@ from svyrates.compare.trend import trend_test
 __all__ = [
     "EVERYONE",
     "EVERYONE_ELSE",
+    "AdjustmentTable",
     "ComparisonTable",
     "ContrastTable",
     "DecompositionTable",
     "HomogeneityTable",
     "common_difference",
+    "compare_adjustment",
     "compare_rates",
     "contrast",
     "difference_in_differences",

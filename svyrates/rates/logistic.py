@@ -20,8 +20,8 @@ __all__ = ["LogisticFit", "check_matrix", "fit_logistic", "refit"]
 
 FloatArray = NDArray[np.float64]
 _MOST_STEPS, _HALVINGS = 50, 30
-# The Newton decrement, in units of the likelihood of one record, at which the fit is done.
-_DONE = 1e-16
+# The Newton decrement, in units of the likelihood of one record, from which one step is enough.
+_DONE = 1e-13
 # A fitted probability this close to 0 or 1 says that the likelihood has no maximum.
 _SEPARATED = 1e-7
 
@@ -121,6 +121,9 @@ def fit_logistic(
         if not np.isfinite(decrement) or decrement < 0:
             _separated(x, eta, names)
         if decrement <= _DONE * y.size:
+            # Close to the maximum a full step squares the error: the last one is always taken.
+            beta = beta + move
+            eta = x @ beta
             break
         size = 1.0
         for _halving in range(_HALVINGS):
@@ -134,6 +137,7 @@ def fit_logistic(
         _separated(x, eta, names)
     mu = special.expit(eta)
     _check_separation(x, mu, w, names)
+    information = (x * (w * mu * (1.0 - mu))[:, None]).T @ x
     return LogisticFit(beta, mu, w, information)
 
 

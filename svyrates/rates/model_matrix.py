@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import product
 from typing import Any
 
 import numpy as np
@@ -108,14 +110,15 @@ def build_matrix(
     parsed: ParsedFormula, columns: ModelColumns, kept: NDArray[np.intp]
 ) -> ModelMatrix:
     """Model matrix of some records."""
-    from patsy import EvalEnvironment, PatsyError, dmatrix
+    from patsy import EvalEnvironment, NAAction, PatsyError, dmatrix
 
     data = {f"x{i}": columns.categorical(name, kept) for i, name in enumerate(parsed.columns)}
     # Nothing of the caller's can be seen from here.
     names_at_hand = EvalEnvironment([{"log": np.log, "exp": np.exp, "sqrt": np.sqrt}])
     try:
         with np.errstate(all="ignore"):
-            built = dmatrix(parsed.right, data, eval_env=names_at_hand, NA_action="raise")
+            undefined_stays = NAAction(on_NA="raise", NA_types=[])
+            built = dmatrix(parsed.right, data, names_at_hand, NA_action=undefined_stays)
     except PatsyError as problem:
         reason = _readable(str(problem).splitlines()[0], parsed)
         raise QuestionError(f"The formula {parsed.text!r} cannot be built: {reason}.") from problem
@@ -126,7 +129,7 @@ def build_matrix(
         faults.append(f"terms are infinite or undefined in {bad} records, such as log of 0.")
     all_faults(QuestionError, f"The formula {parsed.text!r} has", faults)
     info = built.design_info
-    names = tuple(_coefficient(name, parsed) for name in info.column_names)
+    names = tuple(_coefficients(info, parsed))
     terms = {
         _readable(name, parsed): where
         for name, where in info.term_name_slices.items()
@@ -135,11 +138,30 @@ def build_matrix(
     return ModelMatrix(matrix, names, terms, info, data)
 
 
-def _coefficient(name: str, parsed: ParsedFormula) -> str:
-    """Name of a coefficient, such as "tenure = owner × age"."""
-    plain = re.sub(r"C\((x\d+)[^)]*\)+\[", r"\1[", name)
-    parts = re.sub(r"\[(?:T\.)?(.*?)\](?=:|$)", r" = \1", plain).split(":")
-    return " × ".join(_readable(part, parsed) for part in parts)
+def _coefficients(info: Any, parsed: ParsedFormula) -> Iterator[str]:
+    """Names of the coefficients in order, such as "tenure = owner × age"."""
+    for term in info.terms:
+        for part in info.term_codings[term]:
+            if not part.factors:
+                yield "Intercept"
+                continue
+            each = [list(_of_factor(info.factor_infos[f], f, part, parsed)) for f in part.factors]
+            # The first factor varies fastest.
+            for reversed_names in product(*reversed(each)):
+                yield " × ".join(reversed(reversed_names))
+
+
+def _of_factor(found: Any, factor: Any, part: Any, parsed: ParsedFormula) -> Iterator[str]:
+    if found.type == "numerical":
+        name = _readable(factor.name(), parsed)
+        several = found.num_columns > 1
+        yield from (f"{name} {i + 1}" if several else name for i in range(found.num_columns))
+        return
+    position = re.search(r"x(\d+)", factor.name())
+    assert position is not None  # noqa: S101 - a factor is made of columns
+    column_name = parsed.columns[int(position[1])]
+    for suffix in part.contrast_matrices[factor].column_suffixes:
+        yield f"{column_name} = {suffix[1:-1].removeprefix('T.')}"
 
 
 def _readable(text: str, parsed: ParsedFormula) -> str:
