@@ -117,9 +117,9 @@ class AdjustmentTable(Tabular):
         return (
             (
                 f"{100 * self.level:g}% limits, t tests with the covariance of the groups; df: "
-                f"{self.rates.df_rule}. change: adjusted minus crude difference, tested by its own "
-                "covariance."
+                f"{self.rates.df_rule}."
             ),
+            "change: adjusted minus crude difference, tested by its own covariance.",
             *self.rates.remarks,
             "An adjusted difference is not a cause: what was not adjusted for stays in it.",
         )
