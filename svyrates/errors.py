@@ -17,6 +17,7 @@ __all__ = [
     "DataFileError",
     "DesignError",
     "DesignWarning",
+    "FigureError",
     "QuestionError",
     "RatesError",
     "RatesWarning",
@@ -45,6 +46,10 @@ class ComparisonError(RatesError):
 
 class DataFileError(RatesError):
     """A data file cannot be read, or a result cannot be written."""
+
+
+class FigureError(RatesError):
+    """A figure cannot be drawn from this table, on these axes, or without matplotlib."""
 
 
 class RatesWarning(UserWarning):

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
@@ -14,6 +14,9 @@ from svyrates.rates.layout import rate_layout
 from svyrates.rates.model_table import ModelTable
 from svyrates.rates.source import RateSource
 from svyrates.words import Table, Tabular
+
+if TYPE_CHECKING:
+    from svyrates.rates.presentation import Presentation, Standard
 
 __all__ = ["Coverage", "RateBlock", "RateTable"]
 
@@ -76,6 +79,7 @@ class RateTable(Tabular):
     kind : what kind of rates these are, "" for crude ones
     crude_rate : the weighted rate before any adjustment; None where `rate` is that
     model : the regression behind adjusted rates; None for all others
+    standard : the presentation standard that `presentation` judges by
     remarks : what must be said under every table made of these rates
 
     Examples
@@ -119,6 +123,14 @@ class RateTable(Tabular):
     remarks: tuple[str, ...] = ()
     crude_rate: FloatArray | None = None
     model: ModelTable | None = None
+    standard: str | Standard | None = "nchs-proportions"
+
+    @property
+    def presentation(self) -> Presentation | None:
+        """What the presentation standard says of each row; None for a table already judged."""
+        from svyrates.rates.presentation import judge_presentation
+
+        return None if self.standard is None else judge_presentation(self, self.standard)
 
     def what(self, outcome: int) -> str:
         """An outcome in words, such as "damp = 1, standardised for age"."""
@@ -207,7 +219,8 @@ class RateTable(Tabular):
         pandas.DataFrame
             The label columns, then `n`, `n_success`, `n_missing`, `weighted_n`, `rate`, `se`,
             `low`, `high`, `df`, `design_effect`, `n_effective`, `kish_factor`, `rse`,
-            `unweighted_rate`, `crude_rate` where `rate` is adjusted, and `note`.
+            `unweighted_rate`, `crude_rate` where `rate` is adjusted, `presentation` (see
+            `judge_presentation`) and `note`.
         """
         names, rows = self.label_columns()
         data: dict[str, Any] = {
@@ -223,6 +236,9 @@ class RateTable(Tabular):
             data[name] = getattr(self, name)
         if self.crude_rate is not None:
             data["crude_rate"] = self.crude_rate
+        judged = self.presentation
+        if judged is not None:
+            data["presentation"] = list(judged.status)
         data["note"] = list(self.notes)
         return pd.DataFrame(data)
 
