@@ -22,7 +22,7 @@ from svyrates.compare.verdict import TOLERANCE, outside_chi_square
 from svyrates.errors import ComparisonError, some
 from svyrates.rates.source import SideRates
 from svyrates.rates.table import RateTable
-from svyrates.totals import joint_wald
+from svyrates.totals import ZERO, joint_wald
 
 __all__ = ["homogeneity_test"]
 
@@ -196,7 +196,7 @@ def _test(
     simple, simple_p = _pearson(n, y)
     crude = float(y.sum() / size)
     simple_delta = _design_effects(s, n / size, crude, size)
-    moved = joint_wald(c @ (u - p), shift @ covariance @ shift.T, df).p
+    moved = _shift_p(c @ (u - p), shift @ covariance @ shift.T, v + s, df)
     error_rate = _error_rate(simple_delta, k - 1, alpha)
     if not chosen[2] > 0:
         notes.append("too few degrees of freedom for this test")
@@ -215,6 +215,14 @@ def _nothing(k: float, note: str) -> _Test:
         k, nan, nan, nan, (), nan, nan, nan, nan, nan, nan, nan, nan, nan, nan, nan,
         "undetermined", note,
     )  # fmt: skip
+
+
+def _shift_p(shift: FloatArray, covariance: FloatArray, formed: FloatArray, df: float) -> float:
+    """Whether the unweighted contrasts differ from the weighted ones."""
+    # Where all weights are equal rounding is all that separates them.
+    if (covariance.diagonal() <= ZERO * formed.diagonal()).any():
+        return float("nan")
+    return joint_wald(shift, covariance, df).p
 
 
 def _design_effects(v: FloatArray, share: FloatArray, pooled: float, n: float) -> FloatArray:

@@ -32,9 +32,9 @@ def joint_wald(estimate: FloatArray, covariance: FloatArray, df: float) -> WaldT
     nothing = WaldTest(*[float("nan")] * 4)
     if not np.isfinite(covariance).all() or not np.isfinite(estimate).all():
         return nothing
-    scale = np.sqrt(covariance.diagonal())
-    if (scale == 0.0).any():
+    if (covariance.diagonal() <= 0.0).any():
         return nothing
+    scale = np.sqrt(covariance.diagonal())
     values, vectors = np.linalg.eigh(covariance / np.outer(scale, scale))
     kept = values > 1e-9 * values[-1]
     q = float(kept.sum())
