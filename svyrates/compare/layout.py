@@ -125,7 +125,7 @@ def _about(table: ComparisonTable) -> list[str]:
             f"{table.rates.df_rule}."
         )
     ]
-    if table.rates.blocks[0].source.knows_records or not np.isnan(table.simple_p).all():
+    if not np.isnan(table.simple_p).all():
         lines.append(
             f"Simple formula: two independent simple random samples, {SIMPLE_NAMES[table.variant]}."
         )
@@ -138,7 +138,7 @@ def _about(table: ComparisonTable) -> list[str]:
     found = [verdict for verdict in MEANINGS if verdict in set(table.verdict)]
     lines += [f"{verdict}: {meaning(verdict, noun)}." for verdict in found]
     lines += family_lines(
-        [len(block.group) for block in table.blocks], table.held, table.multiplicity,
+        table.family_sizes, table.held, table.multiplicity,
         table.family, table.level,
     )  # fmt: skip
     lines += table.rates.remarks

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
 from typing import Any
@@ -118,6 +119,11 @@ class ComparisonTable(Tabular):
 
     def __len__(self) -> int:
         return len(self.group)
+
+    @property
+    def family_sizes(self) -> list[int]:
+        """Comparisons within each level of the columns held fixed."""
+        return list(Counter(self.levels).values())
 
     @property
     def limits_level(self) -> float:
@@ -252,6 +258,26 @@ class ComparisonTable(Tabular):
         from svyrates.compare.explain import paragraph
 
         return paragraph(self, row)
+
+    def sentences(self, *, cautions: bool = True) -> list[str]:
+        """Put the comparisons into plain sentences, one each.
+
+        Parameters
+        ----------
+        cautions : bool
+            Add how many comparisons there were, what must be said of the rates, and that a
+            difference is not its cause.
+
+        Returns
+        -------
+        list of str
+            Direction, size with limits, evidence, adjustment, and what the simple formula would
+            have claimed where it misleads. Differences are in percentage points, relative ones in
+            percent; numbers are rounded half away from zero.
+        """
+        from svyrates.compare.sentences import sentences
+
+        return sentences(self, cautions=cautions)
 
     def title_of(self, row: int) -> str:
         """Short name of a comparison, such as "owner versus rent-free (region North)"."""
