@@ -21,6 +21,7 @@ from svyrates.rates.table import RateTable
 __all__ = ["withhold_comparisons", "withhold_rates"]
 
 BoolArray = NDArray[np.bool_]
+HIDDEN = "a rate in it is withheld"
 _COUNTS = ("n", "n_success", "n_missing", "weighted_n")
 _PROVIDER = (
     "The data provider's own disclosure and release rules, and local law, come before these; a "
@@ -161,7 +162,7 @@ def withhold_comparisons(gaps: ComparisonTable, public: RateTable) -> Comparison
             arrays[each.name] = np.where(gone, np.nan, values)
     note, verdict = gaps.note.copy(), gaps.verdict.copy()
     conclusion = gaps.conclusion.copy()
-    note[gone], verdict[gone], conclusion[gone] = WITHHELD, "withheld", "withheld"
+    note[gone], verdict[gone], conclusion[gone] = HIDDEN, "withheld", "withheld"
     return replace(
         gaps, rates=public, blocks=(), note=note, verdict=verdict, conclusion=conclusion, **arrays
     )

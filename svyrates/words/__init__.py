@@ -1,6 +1,7 @@
 """Numbers, sentences and tables for readers; a leaf that knows no statistics."""
 
 from svyrates.words.escape import display_width, for_html, for_terminal, shorten
+from svyrates.words.markup import TABLE_STYLE
 from svyrates.words.numbers import count, fixed, p_phrase, p_value, percent, points, significant
 from svyrates.words.progress import progress_bar
 from svyrates.words.sentences import join_words, plural
@@ -8,6 +9,7 @@ from svyrates.words.table import Column, Table
 from svyrates.words.tabular import Tabular
 
 __all__ = [
+    "TABLE_STYLE",
     "Column",
     "Table",
     "Tabular",

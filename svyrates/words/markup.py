@@ -10,11 +10,10 @@ from svyrates.words.escape import for_html, for_latex, for_markdown
 if TYPE_CHECKING:
     from svyrates.words.table import Column
 
-__all__ = ["html_table", "latex_table", "markdown_table"]
+__all__ = ["TABLE_STYLE", "html_table", "latex_table", "markdown_table"]
 
 # Colours are the reader's own, so that the table sits well on light and on dark pages.
-_STYLE = (
-    "<style>"
+TABLE_STYLE = (
     ".rates-table{border-collapse:collapse;font-variant-numeric:tabular-nums;margin:.75em 0;"
     "color:inherit;background:transparent;font-size:.95em}"
     ".rates-table caption{text-align:left;font-weight:600;padding:.25em 0 .5em;caption-side:top}"
@@ -30,13 +29,17 @@ _STYLE = (
     ".rates-table td.rates-number{white-space:nowrap}"
     ".rates-frame{overflow-x:auto}"
     ".rates-notes{font-size:.85em;opacity:.85;margin:.2em 0;max-width:46em}"
-    "</style>"
 )
 
 
-def html_table(title: str, columns: Sequence[Column], notes: Sequence[str]) -> str:
+def html_table(
+    title: str, columns: Sequence[Column], notes: Sequence[str], *, in_page: bool = False
+) -> str:
     """A table with a caption, scoped headers and paragraphs of notes."""
-    lines = [_STYLE, '<div class="rates-frame"><table class="rates-table">']
+    # On a page, what scrolls must be reached by the keyboard; a fragment brings its own style.
+    region = f' tabindex="0" role="region" aria-label="{for_html(title)}"' if in_page else ""
+    lines = [] if in_page else [f"<style>{TABLE_STYLE}</style>"]
+    lines.append(f'<div class="rates-frame"{region}><table class="rates-table">')
     lines.append(f"<caption>{for_html(title)}</caption>")
     if any(column.heading for column in columns):
         lines.append("<thead><tr>")

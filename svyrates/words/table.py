@@ -58,9 +58,9 @@ class Table:
         """Plain text whose lines are at most `width` columns wide (40 at the least)."""
         return text.render(self.title, self.columns, self.notes, max(width, text.NARROWEST))
 
-    def html(self) -> str:
-        """An HTML fragment with its own style, for a notebook or a page, light or dark."""
-        return markup.html_table(self.title, self.columns, self.notes)
+    def html(self, *, in_page: bool = False) -> str:
+        """An HTML fragment, light or dark; with its own style unless it is part of a page."""
+        return markup.html_table(self.title, self.columns, self.notes, in_page=in_page)
 
     def markdown(self) -> str:
         """A pipe table."""
