@@ -225,3 +225,40 @@ def compare(
     names = SurveyFile.__dataclass_fields__
     survey = SurveyFile(**{name: value for name, value in settings.items() if name in names})
     run_compare(survey, **{name: value for name, value in settings.items() if name not in names})
+
+
+@app.command()
+def run(
+    plan: Annotated[Path, typer.Argument(help="A plan: a TOML file.")],
+    out: Annotated[
+        Path | None, typer.Option(help="Folder for the results, instead of the plan's own.")
+    ] = None,
+) -> None:
+    """Carry out a plan: tables, figures and a report; 3 if some questions have no answer."""
+    from svyrates.command.plan_run import run_plan
+
+    code = run_plan(plan, out)
+    if code:
+        raise typer.Exit(code)
+
+
+@app.command()
+def check(plan: Annotated[Path, typer.Argument(help="A plan: a TOML file.")]) -> None:
+    """Check a plan, its design and its data, without estimating anything."""
+    from svyrates.command.plan_run import check_plan
+
+    check_plan(plan)
+
+
+@app.command("plan")
+def first_plan(
+    file: Annotated[Path, typer.Argument(help="CSV (also compressed), Parquet or XPORT file.")],
+    out: Annotated[Path, typer.Option(help="Where to write the plan.")] = Path("plan.toml"),
+    replace: Annotated[bool, typer.Option("--replace", help="Write over a plan.")] = False,
+    separator: Annotated[str | None, typer.Option(help="Separator of a CSV file.")] = None,
+    encoding: Annotated[str, typer.Option(help="Encoding of text in the file.")] = "utf-8",
+) -> None:
+    """Look at a data file and write a first plan, with every guess marked."""
+    from svyrates.command.plan_guess import guess_plan
+
+    guess_plan(file, out, replace=replace, separator=separator, encoding=encoding)

@@ -21,7 +21,7 @@ from svyrates.design.columns import ColumnFault, code_column, open_frame, read_m
 from svyrates.errors import DataFileError, QuestionError, RatesWarning, some
 from svyrates.rates import RateTable, estimate_rates
 
-__all__ = ["run_compare", "show"]
+__all__ = ["positions", "run_compare", "screen_width", "show", "typed", "versus_of"]
 
 BoolArray = NDArray[np.bool_]
 
@@ -60,22 +60,22 @@ def run_compare(
     rates = estimate_rates(
         design,
         outcome if len(outcome) > 1 else outcome[0],
-        success=_typed(data, outcome, success) if success else None,
+        success=typed(data, outcome, success) if success else None,
         by=by,
         where=_mask(data, conditions) if conditions else None,
         interval=interval,  # type: ignore[arg-type]
         level=level,
         df=_number_or_text(df),
     )
-    typer.echo(design.summary().text(_width()) + "\n")
-    typer.echo(rates.text(_width(), percent=percent) + "\n")
+    typer.echo(design.summary().text(screen_width()) + "\n")
+    typer.echo(rates.text(screen_width(), percent=percent) + "\n")
     gaps = None
     if by or versus is not None:
         with warnings.catch_warnings(record=True) as caught:
             warnings.simplefilter("always", RatesWarning)
             gaps = compare_rates(
                 rates,
-                _versus(versus, rates),
+                versus_of(versus, rates),
                 within=within,
                 measure=measure,  # type: ignore[arg-type]
                 alternative=alternative,  # type: ignore[arg-type]
@@ -98,7 +98,7 @@ def show(
     explain: bool = False,
 ) -> None:
     """Print comparisons, what they mean in words, and the warning last, where it is seen."""
-    typer.echo(gaps.text(_width(), percent=percent) + "\n")
+    typer.echo(gaps.text(screen_width(), percent=percent) + "\n")
     if explain:
         for row in range(len(gaps)):
             typer.echo(_wrapped(f"{gaps.title_of(row)}: {gaps.explain_row(row)}") + "\n")
@@ -112,11 +112,12 @@ def _wrapped(text: str) -> str:
     from svyrates.words.text import wrap
 
     return "\n".join(
-        line for part in text.splitlines() for line in wrap(part, _width(), indent="  ")
+        line for part in text.splitlines() for line in wrap(part, screen_width(), indent="  ")
     )
 
 
-def _width() -> int:
+def screen_width() -> int:
+    """Columns of the terminal, within reason."""
     return min(max(shutil.get_terminal_size((80, 24)).columns, 60), 160)
 
 
@@ -128,7 +129,7 @@ def _condition(text: str) -> tuple[str, list[str] | None]:
     return column, values.split(",") if sign else None
 
 
-def _positions(levels: tuple[object, ...], wanted: list[str], role: str) -> set[int]:
+def positions(levels: tuple[object, ...], wanted: list[str], role: str) -> set[int]:
     """Find labels of any type by their text, as the command line only has text."""
     texts = [str(level) for level in levels]
     absent = [value for value in wanted if value not in texts]
@@ -139,7 +140,7 @@ def _positions(levels: tuple[object, ...], wanted: list[str], role: str) -> set[
     return {texts.index(value) for value in wanted}
 
 
-def _typed(data: pd.DataFrame, outcomes: list[str], success: list[str]) -> dict[str, Any]:
+def typed(data: pd.DataFrame, outcomes: list[str], success: list[str]) -> dict[str, Any]:
     """Success values with the types that each outcome column has."""
     found: dict[str, Any] = {}
     frame = open_frame(data)
@@ -148,7 +149,7 @@ def _typed(data: pd.DataFrame, outcomes: list[str], success: list[str]) -> dict[
             levels = code_column(frame, name, "outcome").levels
         except ColumnFault as fault:
             raise QuestionError(str(fault)) from fault
-        chosen = sorted(_positions(levels, success, f"--success for {name!r}"))
+        chosen = sorted(positions(levels, success, f"--success for {name!r}"))
         found[name] = [levels[position] for position in chosen]
     return found
 
@@ -163,7 +164,7 @@ def _mask(data: pd.DataFrame, conditions: list[tuple[str, list[str] | None]]) ->
                 member, _ = read_mask(frame, column, "--where")
             else:
                 coded = code_column(frame, column, "--where")
-                wanted = _positions(coded.levels, values, f"--where {column!r}")
+                wanted = positions(coded.levels, values, f"--where {column!r}")
                 member = np.isin(coded.codes, sorted(wanted))
         except ColumnFault as fault:
             raise QuestionError(str(fault)) from fault
@@ -186,7 +187,7 @@ def _margin(ends: list[float] | None) -> float | tuple[float, float] | None:
     return ends[0], ends[1]
 
 
-def _versus(text: str | None, rates: RateTable) -> Any:
+def versus_of(text: str | None, rates: RateTable) -> Any:
     """A group before all else, then one of the two unions, then a number."""
     if text is None or any(text == str(label) for group in rates.groups for label in group):
         return text

@@ -8,8 +8,9 @@ import gzip
 import io
 import zipfile
 import zlib
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Collection, Iterable, Iterator
 from contextlib import AbstractContextManager, contextmanager
+from dataclasses import dataclass
 from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import IO, Any, cast
@@ -39,7 +40,12 @@ _UNREADABLE = (
 
 
 def read_columns(
-    path: Path, columns: Iterable[str], *, separator: str | None = None, encoding: str = "utf-8"
+    path: Path,
+    columns: Iterable[str],
+    *,
+    may_lack: Collection[str] = (),
+    separator: str | None = None,
+    encoding: str = "utf-8",
 ) -> pd.DataFrame:
     """Read the named columns of a data file.
 
@@ -48,6 +54,7 @@ def read_columns(
     path : Path
         CSV or TSV (also compressed), Parquet, or XPORT (.xpt).
     columns : names of the columns to read, or patterns such as `rw_*`; the others are left alone
+    may_lack : those of them that are left out where the file does not have them
     separator : of a text file; a tab for .tsv, else a comma
     encoding : of a text or XPORT file
 
@@ -64,7 +71,7 @@ def read_columns(
         raise DataFileError(f"{path}: this is a folder, not a data file.")
     if path.stat().st_size == 0:
         raise DataFileError(f"{path}: the file is empty.")
-    wanted = list(dict.fromkeys(columns))
+    wanted = _Wanted(list(dict.fromkeys(columns)), frozenset(may_lack))
     suffixes = [suffix.lower() for suffix in path.suffixes]
     packed = _COMPRESSIONS.get(suffixes[-1] if suffixes else "")
     kind = suffixes[-2] if packed and len(suffixes) > 1 else suffixes[-1] if suffixes else ""
@@ -92,7 +99,15 @@ def _separator(kind: str) -> str:
     return "\t" if kind == ".tsv" else ","
 
 
-def _choose(path: Path, wanted: list[str], names: list[str], hint: str = "") -> list[str]:
+@dataclass(frozen=True, slots=True)
+class _Wanted:
+    """Columns to read, and those of them that the file need not have."""
+
+    names: list[str]
+    may_lack: frozenset[str]
+
+
+def _choose(path: Path, wanted: _Wanted, names: list[str], hint: str = "") -> list[str]:
     """The columns wanted, patterns replaced by the columns that fit them."""
     twice = sorted({name for name in names if names.count(name) > 1})
     if twice:
@@ -101,10 +116,10 @@ def _choose(path: Path, wanted: list[str], names: list[str], hint: str = "") -> 
         )
     chosen: dict[str, None] = {}
     absent = []
-    for name in wanted:
+    for name in wanted.names:
         fitting = [name] if name in names else _fitting(name, names)
         chosen |= dict.fromkeys(fitting)
-        if not fitting:
+        if not fitting and name not in wanted.may_lack:
             absent.append(name)
     if not absent:
         return list(chosen)
@@ -125,7 +140,7 @@ def _fitting(pattern: str, names: list[str]) -> list[str]:
 
 
 def _read_text(
-    path: Path, wanted: list[str], packed: str | None, separator: str, encoding: str
+    path: Path, wanted: _Wanted, packed: str | None, separator: str, encoding: str
 ) -> pd.DataFrame:
     if len(separator) != 1:
         raise DataFileError(f"the separator must be one character; got {separator!r}.")
@@ -138,9 +153,9 @@ def _read_text(
         names = [str(name) for name in header.iloc[0]]
         other = next((mark for mark in ";\t|," if mark != separator and mark in names[0]), None)
         hint = f" It looks separated by {other!r}: use --separator." if other else ""
-        wanted = _choose(path, wanted, names, hint if len(names) == 1 else "")
+        chosen = _choose(path, wanted, names, hint if len(names) == 1 else "")
         with _watched(path) as file:
-            frame: pd.DataFrame = pd.read_csv(file, usecols=wanted, low_memory=False, **options)
+            frame: pd.DataFrame = pd.read_csv(file, usecols=chosen, low_memory=False, **options)
     except UnicodeError as problem:
         raise DataFileError(
             f"{path}: the text is not {encoding}. Name its encoding, for example with "
@@ -156,10 +171,10 @@ def _read_text(
             f"{path}: cannot be read as a table ({type(problem).__name__}): the file seems "
             f"{kind}, or its suffix does not fit its contents."
         ) from problem
-    return frame[wanted]
+    return frame[chosen]
 
 
-def _read_parquet(path: Path, wanted: list[str]) -> pd.DataFrame:
+def _read_parquet(path: Path, wanted: _Wanted) -> pd.DataFrame:
     try:
         import pyarrow as pa
         import pyarrow.parquet as pq
@@ -168,16 +183,16 @@ def _read_parquet(path: Path, wanted: list[str]) -> pd.DataFrame:
             f"{path}: reading Parquet needs pyarrow: pip install 'svyrates[parquet]'."
         ) from problem
     try:
-        wanted = _choose(path, wanted, pq.read_schema(path).names)
+        chosen = _choose(path, wanted, pq.read_schema(path).names)
         with _sign_of_life(path):
-            return cast("pd.DataFrame", pq.read_table(path, columns=wanted).to_pandas())
+            return cast("pd.DataFrame", pq.read_table(path, columns=chosen).to_pandas())
     except (pa.ArrowException, OSError) as problem:
         raise DataFileError(
             f"{path}: cannot be read as Parquet ({type(problem).__name__})."
         ) from problem
 
 
-def _read_xport(path: Path, wanted: list[str], encoding: str) -> pd.DataFrame:
+def _read_xport(path: Path, wanted: _Wanted, encoding: str) -> pd.DataFrame:
     try:
         with _sign_of_life(path):
             frame = pd.read_sas(path, format="xport", encoding=encoding)
@@ -192,9 +207,9 @@ def _read_xport(path: Path, wanted: list[str], encoding: str) -> pd.DataFrame:
         raise DataFileError(
             f"{path}: cannot be read as an XPORT file ({type(problem).__name__})."
         ) from problem
-    wanted = _choose(path, wanted, [str(name) for name in frame.columns])
-    frame = frame[wanted].copy()
-    for name in wanted:
+    chosen = _choose(path, wanted, [str(name) for name in frame.columns])
+    frame = frame[chosen].copy()
+    for name in chosen:
         column = frame[name]
         if column.dtype.kind == "f":
             # The reader returns this smallest number of the format where the file holds zero.

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from dataclasses import dataclass
 from fnmatch import fnmatchcase
 from pathlib import Path
@@ -53,13 +54,20 @@ class SurveyFile:
     replicate_file: Path | None
     key: list[str] | None
 
-    def read(self, columns: list[str]) -> tuple[pd.DataFrame, SampleDesign]:
-        """Read the design's columns and those that the question needs, and build the design."""
+    def read(
+        self, columns: list[str], *, may_lack: bool = False
+    ) -> tuple[pd.DataFrame, SampleDesign]:
+        """Read the design's columns and those that the questions need, and build the design.
+
+        With `may_lack` a question's column that is not there is left for the question to miss.
+        """
         self._check()
         keys, replicates = self.key or [], self.replicates or []
-        own = [*columns, *(self.strata or ()), *(self.clusters or ()), *(self.population or ())]
-        own += [*([self.weight] if self.weight else []), *keys]
-        data = self._columns(self.file, own if self.replicate_file else [*own, *replicates])
+        own = [*(self.strata or ()), *(self.clusters or ()), *(self.population or ()), *keys]
+        own += [self.weight] if self.weight else []
+        own += [] if self.replicate_file else replicates
+        lacking = set(columns) - set(own) if may_lack else set()
+        data = self._columns(self.file, [*columns, *own], lacking)
         if self.replicate_file is not None:
             weights = self._columns(self.replicate_file, [*keys, *replicates])
             data = merge_replicates(data, weights, on=keys)
@@ -75,8 +83,12 @@ class SurveyFile:
         )
         return data, design
 
-    def _columns(self, file: Path, columns: list[str]) -> pd.DataFrame:
-        return read_columns(file, columns, separator=self.separator, encoding=self.encoding)
+    def _columns(
+        self, file: Path, columns: list[str], may_lack: Collection[str] = ()
+    ) -> pd.DataFrame:
+        return read_columns(
+            file, columns, may_lack=may_lack, separator=self.separator, encoding=self.encoding
+        )
 
     def _check(self) -> None:
         if bool(self.replicates) != (self.scheme is not None):
