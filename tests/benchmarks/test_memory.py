@@ -18,6 +18,7 @@ from tests.benchmarks.speed import (
     replicated,
     second_call,
     survey,
+    weight_matrix,
 )
 
 
@@ -45,14 +46,40 @@ def test_bytes_a_record() -> None:
 @pytest.mark.parametrize("by_rows", [False, True])
 @pytest.mark.parametrize("precision", [np.float32, np.float64])
 def test_replicates_without_a_copy_of_them(by_rows: bool, precision: type) -> None:
-    """At most a tenth of the weight matrix in double precision, whatever its layout and type."""
+    """Rates take at most a tenth of 80 weights in double precision, whatever the file's type.
+
+    What they take goes with the records, not with the replicates: halving the weights in single
+    precision halves the file and not the rest, so that the share of the file itself is double.
+    """
     n, count = 200_000, 80
-    data = replicated(n, count, by_rows=by_rows)
-    if precision is np.float32:
-        data = data.astype({f"rw_{i}": precision for i in range(1, count + 1)})
+    data = replicated(n, count, by_rows=by_rows, precision=precision)
+    matrix = weight_matrix(data)
+    assert matrix.dtype == precision
+    assert matrix.flags.c_contiguous == by_rows
     design = replicate_design(data)
     assert _peak(lambda: replicate_rates(design)) < 0.1 * n * count * 8
-    assert _peak(lambda: replicate_design(data)) < 0.1 * n * count * 8
+
+
+@pytest.mark.parametrize("by_rows", [False, True])
+@pytest.mark.parametrize(("precision", "columns"), [(np.float32, 3), (np.float64, 2)])
+def test_replicate_design_reads_one_column_at_a_time(
+    by_rows: bool, precision: type, columns: int
+) -> None:
+    """A design of replicates holds the weights, one replicate, and what it was converted from."""
+    n = 200_000
+    data = replicated(n, by_rows=by_rows, precision=precision)
+    # The small matrices of the checks do not grow with the records.
+    fixed = 1_000_000
+    assert _peak(lambda: replicate_design(data)) - fixed < columns * 8 * n
+
+
+def test_replicate_rates_take_no_more_for_more_replicates() -> None:
+    """Beyond a chunk of records and the sums, memory does not grow with the replicates."""
+    n = 200_000
+    few, many = (replicate_design(replicated(n, count)) for count in (20, 80))
+    more = _peak(lambda: replicate_rates(many)) - _peak(lambda: replicate_rates(few))
+    # One column more for each replicate would be 96 megabytes.
+    assert more < 4_096 * 60 * 8 + 1_000_000
 
 
 def test_no_table_of_households_by_groups() -> None:
