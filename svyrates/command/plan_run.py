@@ -45,7 +45,7 @@ def run_plan(path: Path, out: Path | None) -> int:
     """Carry out a plan; the exit code says whether every question has an answer."""
     plan = read_plan(path)
     folder = _folder(plan, out)
-    data, design = plan.survey.read(plan.columns(), may_lack=True)
+    data, design = _read(plan)
     answers: list[tuple[Question, Answer]] = []
     failed: list[tuple[str, str]] = []
     total = len(plan.questions)
@@ -60,6 +60,15 @@ def run_plan(path: Path, out: Path | None) -> int:
     _write(folder, content)
     _tell(plan, answers, failed, [*remarks, f"{plural(len(content), 'file')} in {folder}"])
     return SOME_FAILED if failed else 0
+
+
+def _read(plan: Plan) -> tuple[pd.DataFrame, SampleDesign]:
+    """The columns of the plan; all of them where some are not there, to name near ones."""
+    columns = plan.columns()
+    data, design = plan.survey.read(columns, may_lack=True)
+    if set(columns) - set(map(str, data.columns)):
+        return plan.survey.read([*columns, "*"], may_lack=True)
+    return data, design
 
 
 def _tell(
@@ -84,7 +93,7 @@ def _tell(
 def check_plan(path: Path) -> None:
     """Read the plan and the data, and say what is in them; nothing is estimated."""
     plan = read_plan(path)
-    data, design = plan.survey.read(plan.columns(), may_lack=True)
+    data, design = _read(plan)
     typer.echo(design.summary().text(screen_width()) + "\n")
     frame, faults = open_frame(data), []
     for question in plan.questions:
