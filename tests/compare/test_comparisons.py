@@ -15,18 +15,13 @@ from hypothesis import strategies as st
 import svyrates as sr
 from tests import reference
 from tests.compare.scalar import Pair, compare
+from tests.quiet import compare_quietly
 from tests.reference import Record, Survey
 from tests.strategies import frame_of, surveys
 
 MEASURES = ("difference", "ratio", "odds_ratio")
 SIDES = ("two-sided", "greater", "less")
 VARIANTS = ("unweighted", "weighted", "weights-as-counts", "kish")
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
 
 
 def _pair(survey: Survey, first: int, second: float) -> Pair:
@@ -135,7 +130,7 @@ def test_every_column(
     assume(float(shift @ pair.cov @ shift) > 1e-10 or variant != "unweighted")
     design = sr.SampleDesign(frame, **arguments)
     rates = sr.estimate_rates(design, "y0", by="group", where="inside", level=level)
-    gaps = _quietly(
+    gaps = compare_quietly(
         rates, versus, measure=measure, alternative=alternative, simple=variant, null=null
     )
     found = gaps.to_frame().iloc[gaps.find(first)] if kind != "number" else gaps.to_frame().iloc[0]
@@ -152,8 +147,8 @@ def rates() -> sr.RateTable:
 @pytest.mark.parametrize("measure", MEASURES)
 @pytest.mark.parametrize("limits", ["linear", "recovered"])
 def test_swapping_the_groups(rates: sr.RateTable, measure: str, limits: str) -> None:
-    one = _quietly(rates, versus="owner", measure=measure, limits=limits)
-    pairs = _quietly(rates, measure=measure, limits=limits)
+    one = compare_quietly(rates, versus="owner", measure=measure, limits=limits)
+    pairs = compare_quietly(rates, measure=measure, limits=limits)
     row, other = one.find("rent-free", "owner"), pairs.find("owner", "rent-free")
 
     def swap(value: float) -> float:
@@ -173,8 +168,8 @@ def test_part_against_whole_is_part_against_rest_scaled() -> None:
     survey = sr.demo_survey(wave="2024")
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
     rates = sr.estimate_rates(design, "damp", by="sex")
-    whole, rest = _quietly(rates, sr.EVERYONE), _quietly(rates, sr.EVERYONE_ELSE)
-    pairs = _quietly(rates)
+    whole, rest = compare_quietly(rates, sr.EVERYONE), compare_quietly(rates, sr.EVERYONE_ELSE)
+    pairs = compare_quietly(rates)
     share = rates.weighted_n / rates.weighted_n.sum()
     np.testing.assert_allclose(whole.estimate, (1 - share) * rest.estimate, rtol=1e-9)
     assert rest.estimate[0] == pytest.approx(pairs.estimate[0])
@@ -183,7 +178,7 @@ def test_part_against_whole_is_part_against_rest_scaled() -> None:
 
 def test_recovered_limits_by_hand(rates: sr.RateTable) -> None:
     """Zou & Donner (2008) with the groups' own limits and the correlation of their rates."""
-    gaps = _quietly(rates, limits="recovered")
+    gaps = compare_quietly(rates, limits="recovered")
     frame = rates.to_frame().set_index("tenure")
     one, two = frame.loc["owner"], frame.loc["social tenant"]
     r = rates.covariance.loc["owner", "social tenant"] / (one["se"] * two["se"])
@@ -204,23 +199,23 @@ def _certain() -> sr.RateTable:
 
 
 def test_a_rate_of_zero_is_tested_where_recovered_limits_touch() -> None:
-    gaps = _quietly(_certain())
+    gaps = compare_quietly(_certain())
     assert gaps.verdict[0] == "undetermined"
     assert np.isnan(gaps.se[0])
     assert "exactly 0 or 1" in gaps.note[0]
     assert gaps.low[0] < gaps.estimate[0] < gaps.high[0] < 0
-    again = _quietly(_certain(), level=1 - gaps.p[0])
+    again = compare_quietly(_certain(), level=1 - gaps.p[0])
     assert again.high[0] == pytest.approx(0.0, abs=1e-6)
-    one_sided = _quietly(_certain(), alternative="less")
+    one_sided = compare_quietly(_certain(), alternative="less")
     assert one_sided.p[0] == pytest.approx(gaps.p[0] / 2)
-    ratio = _quietly(_certain(), measure="ratio")
+    ratio = compare_quietly(_certain(), measure="ratio")
     assert np.isnan([ratio.estimate[0], ratio.low[0], ratio.p[0]]).all()
     assert "the ratio has no variance" in ratio.note[0]
 
 
 def test_two_equal_certain_rates_give_no_evidence() -> None:
     data = pd.DataFrame({"g": list("aaabbb"), "y": [0] * 6})
-    gaps = _quietly(sr.estimate_rates(sr.SampleDesign(data), "y", by="g"))
+    gaps = compare_quietly(sr.estimate_rates(sr.SampleDesign(data), "y", by="g"))
     assert gaps.p[0] == 1.0
     assert gaps.low[0] < 0 < gaps.high[0]
     assert gaps.verdict[0] == "undetermined"
@@ -230,7 +225,7 @@ def test_empty_and_one_unit_groups_are_undetermined() -> None:
     survey = sr.demo_survey(wave="2024")
     survey["heating"] = survey["heating"].cat.add_categories(["peat"])
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
-    gaps = _quietly(sr.estimate_rates(design, "draught", by="heating"), versus="gas boiler")
+    gaps = compare_quietly(sr.estimate_rates(design, "draught", by="heating"), versus="gas boiler")
     notes = dict(zip(gaps.group, gaps.note, strict=True))
     assert "a group is empty" in notes["peat"]
     assert "one sampling unit" in notes["heat network"]
@@ -243,7 +238,7 @@ def test_empty_and_one_unit_groups_are_undetermined() -> None:
 def test_sources_of_the_variance_multiply_to_the_ratio(
     rates: sr.RateTable, measure: str, versus: Any
 ) -> None:
-    gaps = _quietly(rates, versus, measure=measure)
+    gaps = compare_quietly(rates, versus, measure=measure)
     product = gaps.variance_sources()[["weights", "clusters", "covariance", "strata"]].prod(axis=1)
     np.testing.assert_allclose(product, gaps.variance_ratio, rtol=1e-9)
 
@@ -256,13 +251,13 @@ def test_sources_of_the_variance_one_by_one() -> None:
     survey["unit"] = survey["district"] + survey["block"].astype(str)
     units = sr.estimate_rates(sr.SampleDesign(survey, weight="wt", clusters="unit"), **ask)
     records = sr.estimate_rates(sr.SampleDesign(survey, weight="wt"), **ask)
-    gaps = _quietly(sr.estimate_rates(full, **ask))
+    gaps = compare_quietly(sr.estimate_rates(full, **ask))
     sources = gaps.variance_sources()
     apart = records.variance[0] + records.variance[1]
     assert sources["weights"][0] == pytest.approx(apart / gaps.simple_se[0] ** 2, rel=1e-9)
     clustered = units.variance[0] + units.variance[1]
     assert sources["clusters"][0] == pytest.approx(clustered / apart, rel=1e-9)
-    together = _quietly(units).se[0] ** 2
+    together = compare_quietly(units).se[0] ** 2
     assert sources["covariance"][0] == pytest.approx(together / clustered, rel=1e-9)
 
 
@@ -270,12 +265,12 @@ def test_within_levels_and_across_them() -> None:
     survey = sr.demo_survey(wave="2024")
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
     rates = sr.estimate_rates(design, "damp", by=["terrain", "sex", "age_group"])
-    inside = _quietly(rates)
+    inside = compare_quietly(rates)
     assert inside.held == ("outcome", "terrain", "sex")
     assert len(inside) == 4 * 6
-    assert len(_quietly(rates, within="terrain")) == 2 * 28
-    assert len(_quietly(rates, within=[])) == 120
-    everyone = _quietly(rates, sr.EVERYONE)
+    assert len(compare_quietly(rates, within="terrain")) == 2 * 28
+    assert len(compare_quietly(rates, within=[])) == 120
+    everyone = compare_quietly(rates, sr.EVERYONE)
     upland = sr.estimate_rates(
         design, "damp", by="sex", where=(survey["terrain"] == "upland").to_numpy()
     )
@@ -291,7 +286,7 @@ def test_masks_leave_everyone_whole() -> None:
     rates = sr.estimate_rates(design, "damp", by=helps)
     known = survey["help_grant"].notna() & survey["help_advice"].notna()
     expected = np.average(survey.loc[known, "damp"], weights=survey.loc[known, "wt"])
-    assert _quietly(rates, sr.EVERYONE).versus_rate[0] == pytest.approx(expected, rel=1e-12)
+    assert compare_quietly(rates, sr.EVERYONE).versus_rate[0] == pytest.approx(expected, rel=1e-12)
     assert rates.coverage.n_group_unknown == (~known).sum()
 
 
@@ -328,14 +323,14 @@ def test_one_group_has_nothing_to_compare(rates: sr.RateTable) -> None:
         sr.compare_rates(whole, sr.EVERYONE)
     with pytest.raises(sr.ComparisonError, match="must be a RateTable; got DataFrame"):
         sr.compare_rates(whole.to_frame())  # type: ignore[arg-type]
-    assert len(_quietly(whole, 0.3)) == 1
+    assert len(compare_quietly(whole, 0.3)) == 1
 
 
 def test_a_number_that_is_a_label_is_the_group() -> None:
     data = pd.DataFrame({"g": [0, 1, 2] * 20, "y": [0, 1, 1, 0, 1, 0] * 10})
     rates = sr.estimate_rates(sr.SampleDesign(data), "y", by="g")
-    assert set(_quietly(rates, versus=1).versus) == {"1"}
-    assert set(_quietly(rates, versus=0.5).versus) == {"0.5"}
+    assert set(compare_quietly(rates, versus=1).versus) == {"1"}
+    assert set(compare_quietly(rates, versus=0.5).versus) == {"0.5"}
 
 
 def test_warning_names_the_comparisons_and_the_line(rates: sr.RateTable) -> None:
@@ -364,7 +359,7 @@ def test_no_warning_where_the_formula_serves() -> None:
 
 
 def test_explain_says_both_answers(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     text = gaps.explain("owner", "rent-free")
     row = gaps.find("rent-free", "owner")
     assert f"{100 * gaps.rate[row]:.1f}% against {100 * gaps.versus_rate[row]:.1f}%" in text
@@ -378,7 +373,7 @@ def test_explain_says_both_answers(rates: sr.RateTable) -> None:
 
 
 def test_tables_fit_and_keep_every_digit(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     for table in (rates, gaps):
         for width in (60, 80, 120, 200):
             assert max(map(len, table.text(width).splitlines())) <= width
@@ -388,7 +383,7 @@ def test_tables_fit_and_keep_every_digit(rates: sr.RateTable) -> None:
 
 
 def test_every_format_to_text_and_to_file(rates: sr.RateTable, tmp_path: Path) -> None:
-    for table in (rates, _quietly(rates)):
+    for table in (rates, compare_quietly(rates)):
         for kind in ("csv", "json", "html", "markdown", "latex"):
             write = getattr(table, f"to_{kind}")
             text = write()
@@ -398,11 +393,11 @@ def test_every_format_to_text_and_to_file(rates: sr.RateTable, tmp_path: Path) -
 
 
 def test_percentage_points_are_never_percent(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     header = gaps.to_markdown(percent=True).splitlines()[2]
     assert "difference (points)" in header
     row = gaps.to_markdown(percent=True).splitlines()[4].split(" | ")
     assert row[2].endswith("%")
     assert not row[4].endswith("%")
-    ratio = _quietly(rates, measure="ratio").to_markdown(percent=True)
+    ratio = compare_quietly(rates, measure="ratio").to_markdown(percent=True)
     assert "points" not in ratio

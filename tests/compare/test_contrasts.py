@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import warnings
 from typing import Any
 
 import numpy as np
@@ -15,6 +14,7 @@ from scipy import stats
 
 import svyrates as sr
 from tests import reference
+from tests.quiet import compare_quietly
 from tests.reference import Survey
 from tests.strategies import frame_of, surveys
 
@@ -23,12 +23,6 @@ SCALES = {
     "log": (math.log, lambda p: 1 / p),
     "logit": (lambda p: math.log(p / (1 - p)), lambda p: 1 / (p * (1 - p))),
 }
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
 
 
 @settings(max_examples=80, suppress_health_check=[HealthCheck.filter_too_much])
@@ -103,9 +97,9 @@ def rates(request: pytest.FixtureRequest, both: sr.SampleDesign) -> sr.RateTable
 
 
 def test_pairs_are_contrasts(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates, within="wave")
+    gaps = compare_quietly(rates, within="wave")
     for measure, scale in (("difference", "rate"), ("ratio", "log"), ("odds_ratio", "logit")):
-        gaps = _quietly(rates, measure=measure)
+        gaps = compare_quietly(rates, measure=measure)
         for row in range(len(gaps)):
             wave = gaps.levels[row][1]
             weights = {(wave, gaps.group[row]): 1, (wave, gaps.versus[row]): -1}
@@ -119,7 +113,7 @@ def test_pairs_are_contrasts(rates: sr.RateTable) -> None:
 
 def test_difference_in_differences_is_the_difference_of_two(rates: sr.RateTable) -> None:
     did = sr.difference_in_differences(rates, versus="owner")
-    change = _quietly(rates, within="tenure")
+    change = compare_quietly(rates, within="tenure")
     for row, name in enumerate(did.contrast):
         group = name.split(" − ")[0]
         one = change.find("2024", "2021", tenure=group)
@@ -203,7 +197,7 @@ def test_trend_is_the_least_squares_line() -> None:
         sr.trend_test(numbers, [0, 20, 40, 60]).estimate[0]
     )
     two = sr.trend_test(sr.estimate_rates(design, "damp", by="sex"))
-    pair = _quietly(sr.estimate_rates(design, "damp", by="sex"))
+    pair = compare_quietly(sr.estimate_rates(design, "damp", by="sex"))
     assert two.contrast == ("linear, per step",)
     assert two.p[0] == pytest.approx(pair.p[0], rel=1e-9)
 
@@ -299,7 +293,7 @@ def test_part_and_whole_by_masks(both: sr.SampleDesign) -> None:
         for _, each in units.groupby(level=0)
     )
     assert found.se[0] == pytest.approx(np.sqrt(variance), rel=1e-10)
-    assert found.se[0] == pytest.approx(_quietly(rates).se[0], rel=1e-12)
+    assert found.se[0] == pytest.approx(compare_quietly(rates).se[0], rel=1e-12)
 
 
 def test_order_of_groups_and_signs(rates: sr.RateTable) -> None:

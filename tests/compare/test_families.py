@@ -3,9 +3,7 @@
 from __future__ import annotations
 
 import json
-import warnings
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -17,15 +15,10 @@ from scipy import stats
 import svyrates as sr
 from svyrates.compare import multiplicity
 from svyrates.compare.multiplicity import MULTIPLICITY, adjust, draw_smallest
+from tests.quiet import compare_quietly
 
 FIXTURES = Path(__file__).parents[2] / "fixtures" / "published"
 METHODS = [method for method in MULTIPLICITY if method not in ("none", "max-t")]
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
 
 
 def _by_hand(p: list[float], method: str) -> list[float]:
@@ -123,16 +116,18 @@ def test_max_t_of_unequal_correlations_and_df_against_simulation() -> None:
 
 
 def test_max_t_lies_between_the_raw_p_and_bonferroni(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates, multiplicity="max-t")
-    bonferroni = _quietly(rates, multiplicity="bonferroni")
+    gaps = compare_quietly(rates, multiplicity="max-t")
+    bonferroni = compare_quietly(rates, multiplicity="bonferroni")
     assert (gaps.p_adjusted >= gaps.p).all()
     assert (gaps.p_adjusted <= bonferroni.p_adjusted + 1e-12).all()
     assert (gaps.simultaneous_low <= gaps.low).all()
     assert (gaps.simultaneous_low >= bonferroni.simultaneous_low).all()
     assert (gaps.simultaneous_high <= bonferroni.simultaneous_high).all()
-    again = _quietly(rates, multiplicity="max-t")
+    again = compare_quietly(rates, multiplicity="max-t")
     np.testing.assert_array_equal(gaps.p_adjusted, again.p_adjusted)
-    assert (_quietly(rates, multiplicity="max-t", seed=2).p_adjusted != gaps.p_adjusted).any()
+    assert (
+        compare_quietly(rates, multiplicity="max-t", seed=2).p_adjusted != gaps.p_adjusted
+    ).any()
 
 
 @pytest.mark.parametrize("method", ["bonferroni", "sidak", "max-t"])
@@ -142,7 +137,9 @@ def test_simultaneous_limits_agree_with_adjusted_p(
     rates: sr.RateTable, method: str, alternative: str, limits: str
 ) -> None:
     """Limits exclude zero where the adjusted p-value is below alpha."""
-    gaps = _quietly(rates, multiplicity=method, alternative=alternative, limits=limits, level=0.6)
+    gaps = compare_quietly(
+        rates, multiplicity=method, alternative=alternative, limits=limits, level=0.6
+    )
     excluded = (gaps.simultaneous_low > 0) | (gaps.simultaneous_high < 0)
     if limits == "linear":
         np.testing.assert_array_equal(excluded, gaps.p_adjusted < 0.4)
@@ -151,8 +148,8 @@ def test_simultaneous_limits_agree_with_adjusted_p(
 
 
 def test_bonferroni_limits_are_limits_at_a_higher_level(rates: sr.RateTable) -> None:
-    gaps = _quietly(rates, multiplicity="bonferroni", limits="recovered")
-    direct = _quietly(rates, limits="recovered", level=1 - 0.05 / len(gaps))
+    gaps = compare_quietly(rates, multiplicity="bonferroni", limits="recovered")
+    direct = compare_quietly(rates, limits="recovered", level=1 - 0.05 / len(gaps))
     np.testing.assert_allclose(gaps.simultaneous_low, direct.low, rtol=1e-12)
     np.testing.assert_allclose(gaps.simultaneous_high, direct.high, rtol=1e-12)
 
@@ -161,8 +158,8 @@ def test_families_are_levels_or_the_table() -> None:
     survey = sr.demo_survey(wave="2024")
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
     rates = sr.estimate_rates(design, "damp", by=["terrain", "tenure"])
-    by_level = _quietly(rates, multiplicity="holm")
-    together = _quietly(rates, multiplicity="holm", family="table")
+    by_level = compare_quietly(rates, multiplicity="holm")
+    together = compare_quietly(rates, multiplicity="holm", family="table")
     upland = np.array([level[1] == "upland" for level in by_level.levels])
     for part in (upland, ~upland):
         expected = _by_hand(by_level.p[part].tolist(), "holm")
@@ -170,7 +167,7 @@ def test_families_are_levels_or_the_table() -> None:
     np.testing.assert_allclose(together.p_adjusted, _by_hand(together.p.tolist(), "holm"))
     assert "Families of 6 comparisons within terrain" in str(by_level)
     assert "A family of 12 comparisons" in str(together)
-    largest = _quietly(rates, multiplicity="max-t", family="table")
+    largest = compare_quietly(rates, multiplicity="max-t", family="table")
     assert (largest.p_adjusted <= np.minimum(12 * largest.p, 1) + 1e-12).all()
     assert (largest.p_adjusted >= largest.p).all()
 
@@ -181,7 +178,7 @@ def test_undefined_comparisons_do_not_count() -> None:
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
     rates = sr.estimate_rates(design, "draught", by="heating")
     for method in (*METHODS, "max-t"):
-        gaps = _quietly(rates, "gas boiler", multiplicity=method)
+        gaps = compare_quietly(rates, "gas boiler", multiplicity=method)
         tested = ~np.isnan(gaps.p)
         assert not tested.all()
         assert np.isnan(gaps.p_adjusted[~tested]).all()
@@ -196,7 +193,7 @@ def test_a_certain_rate_joins_by_bonferroni() -> None:
         "y": [0] * 14 + [1, 0] * 20 + [1, 1, 0, 0] * 10,
     }
     rates = sr.estimate_rates(sr.SampleDesign(pd.DataFrame(data)), "y", by="g")
-    gaps = _quietly(rates, multiplicity="max-t")
+    gaps = compare_quietly(rates, multiplicity="max-t")
     certain = np.isnan(gaps.se)
     assert certain.sum() == 2
     assert (gaps.p_adjusted[certain] >= 2 * gaps.p[certain] - 1e-12).all()
@@ -210,8 +207,8 @@ def test_relabelled_groups_have_the_same_adjusted_p(order: list[int]) -> None:
     names = list(survey["tenure"].cat.categories)
     survey["g"] = survey["tenure"].map({name: f"g{order[i]}" for i, name in enumerate(names)})
     design = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
-    gaps = _quietly(sr.estimate_rates(design, "mould", by="g"), multiplicity="holm")
-    plain = _quietly(sr.estimate_rates(design, "mould", by="tenure"), multiplicity="holm")
+    gaps = compare_quietly(sr.estimate_rates(design, "mould", by="g"), multiplicity="holm")
+    plain = compare_quietly(sr.estimate_rates(design, "mould", by="tenure"), multiplicity="holm")
     assert sorted(gaps.p_adjusted) == pytest.approx(sorted(plain.p_adjusted))
 
 

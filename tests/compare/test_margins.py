@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
 from typing import Any
 
 import numpy as np
@@ -13,12 +12,7 @@ from scipy import stats
 import svyrates as sr
 from svyrates.compare.hypothesis import Hypothesis
 from svyrates.compare.simple import real_error_rate
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
+from tests.quiet import compare_quietly
 
 
 @pytest.fixture(scope="module")
@@ -41,10 +35,10 @@ MARGINS: list[tuple[str, Any, tuple[float, float]]] = [
 def test_equivalence_is_two_one_sided_tests(
     rates: sr.RateTable, measure: str, margin: Any, ends: tuple[float, float]
 ) -> None:
-    gaps = _quietly(rates, measure=measure, alternative="equivalent", margin=margin)
+    gaps = compare_quietly(rates, measure=measure, alternative="equivalent", margin=margin)
     assert gaps.margin == pytest.approx(ends)
-    above = _quietly(rates, measure=measure, alternative="greater", null=ends[0])
-    below = _quietly(rates, measure=measure, alternative="less", null=ends[1])
+    above = compare_quietly(rates, measure=measure, alternative="greater", null=ends[0])
+    below = compare_quietly(rates, measure=measure, alternative="less", null=ends[1])
     np.testing.assert_allclose(gaps.p, np.maximum(above.p, below.p), rtol=1e-12)
     np.testing.assert_allclose(gaps.simple_p, np.maximum(above.simple_p, below.simple_p))
     # Limits at 1 - 2α lie inside the margin exactly where equivalence is found.
@@ -59,10 +53,10 @@ def test_equivalence_is_two_one_sided_tests(
 def test_non_inferiority_is_one_of_them(
     rates: sr.RateTable, measure: str, margin: Any, ends: tuple[float, float]
 ) -> None:
-    not_lower = _quietly(rates, measure=measure, alternative="not-lower", margin=margin)
-    above = _quietly(rates, measure=measure, alternative="greater", null=ends[0])
-    not_higher = _quietly(rates, measure=measure, alternative="not-higher", margin=margin)
-    below = _quietly(rates, measure=measure, alternative="less", null=ends[1])
+    not_lower = compare_quietly(rates, measure=measure, alternative="not-lower", margin=margin)
+    above = compare_quietly(rates, measure=measure, alternative="greater", null=ends[0])
+    not_higher = compare_quietly(rates, measure=measure, alternative="not-higher", margin=margin)
+    below = compare_quietly(rates, measure=measure, alternative="less", null=ends[1])
     for name in ("p", "simple_p", "low", "simple_error_rate", "simple_coverage"):
         np.testing.assert_allclose(getattr(not_lower, name), getattr(above, name), rtol=1e-9)
         np.testing.assert_allclose(getattr(not_higher, name), getattr(below, name), rtol=1e-9)
@@ -72,8 +66,8 @@ def test_conclusions_of_equivalence_in_words(rates: sr.RateTable) -> None:
     """Difference and equivalence are asked together: four answers (Keppel & Pearcy 2004)."""
     seen = set()
     for margin in np.linspace(0.005, 0.4, 80):
-        gaps = _quietly(rates, alternative="equivalent", margin=float(margin), level=0.6)
-        differs = _quietly(rates, level=0.6).p < 0.4
+        gaps = compare_quietly(rates, alternative="equivalent", margin=float(margin), level=0.6)
+        differs = compare_quietly(rates, level=0.6).p < 0.4
         for row in range(len(gaps)):
             found = bool(gaps.p[row] < 0.4)
             expected = {
@@ -85,28 +79,30 @@ def test_conclusions_of_equivalence_in_words(rates: sr.RateTable) -> None:
             assert gaps.conclusion[row] == expected
             seen.add(expected)
     assert len(seen) == 4
-    gaps = _quietly(rates, alternative="equivalent", margin=0.3)
+    gaps = compare_quietly(rates, alternative="equivalent", margin=0.3)
     text = gaps.explain("owner", "rent-free")
     assert "90% limits" in text
     assert "The margin is -30.0 to +30.0 points; conclusion: equivalent within the margin" in text
     assert "evidence of equivalence" in text
     assert "two one-sided t tests of equivalence between -30.0 points and" in gaps.text(160)
-    lower = _quietly(rates, alternative="not-lower", margin=0.3)
+    lower = compare_quietly(rates, alternative="not-lower", margin=0.3)
     assert set(lower.conclusion) == {"evidence that it is not lower by the margin"}
     assert "The margin is -30.0 points" in lower.explain("owner", "rent-free")
     assert "non-inferiority" in lower.explain("owner", "rent-free")
 
 
 def test_relative_difference_is_the_ratio_less_one(rates: sr.RateTable) -> None:
-    relative = _quietly(rates, measure="relative_difference")
-    ratio = _quietly(rates, measure="ratio")
+    relative = compare_quietly(rates, measure="relative_difference")
+    ratio = compare_quietly(rates, measure="ratio")
     for name in ("estimate", "low", "high", "simple_estimate", "simple_low", "simple_high"):
         np.testing.assert_allclose(getattr(relative, name), getattr(ratio, name) - 1, rtol=1e-9)
     for name in ("se", "p", "simple_p", "shift", "simple_coverage", "variance_ratio"):
         np.testing.assert_allclose(getattr(relative, name), getattr(ratio, name), rtol=1e-12)
     assert "relative_difference" in relative.to_frame()
-    null = _quietly(rates, measure="relative_difference", null=0.1)
-    np.testing.assert_allclose(null.p, _quietly(rates, measure="ratio", null=1.1).p, rtol=1e-9)
+    null = compare_quietly(rates, measure="relative_difference", null=0.1)
+    np.testing.assert_allclose(
+        null.p, compare_quietly(rates, measure="ratio", null=1.1).p, rtol=1e-9
+    )
     assert "relative difference of +" in relative.explain("social tenant", "rent-free")
 
 
@@ -153,8 +149,8 @@ def test_bad_question(rates: sr.RateTable, options: dict[str, Any], message: str
 def test_a_certain_rate_has_equivalence_limits_of_its_own() -> None:
     data = pd.DataFrame({"g": ["a"] * 300 + ["b"] * 300, "y": [0] * 300 + [1] + [0] * 299})
     rates = sr.estimate_rates(sr.SampleDesign(data), "y", by="g")
-    gaps = _quietly(rates, alternative="equivalent", margin=0.05)
-    above = _quietly(rates, alternative="greater", null=-0.05)
-    below = _quietly(rates, alternative="less", null=0.05)
+    gaps = compare_quietly(rates, alternative="equivalent", margin=0.05)
+    above = compare_quietly(rates, alternative="greater", null=-0.05)
+    below = compare_quietly(rates, alternative="less", null=0.05)
     assert gaps.p[0] == pytest.approx(max(above.p[0], below.p[0]))
     assert gaps.p[0] < 0.05

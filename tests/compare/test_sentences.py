@@ -3,20 +3,13 @@
 from __future__ import annotations
 
 import re
-import warnings
-from typing import Any
 
 import numpy as np
 import pandas as pd
 import pytest
 
 import svyrates as sr
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
+from tests.quiet import compare_quietly
 
 
 @pytest.fixture(scope="module")
@@ -35,7 +28,11 @@ def _percent(value: float) -> str:
 
 
 def test_direction_and_size(cold: sr.RateTable) -> None:
-    for table in (_quietly(cold), _quietly(cold, "owner"), _quietly(cold, sr.EVERYONE_ELSE)):
+    for table in (
+        compare_quietly(cold),
+        compare_quietly(cold, "owner"),
+        compare_quietly(cold, sr.EVERYONE_ELSE),
+    ):
         said = table.sentences(cautions=False)
         assert len(said) == len(table)
         for row, text in enumerate(said):
@@ -56,53 +53,53 @@ def test_direction_and_size(cold: sr.RateTable) -> None:
 
 
 def test_points_and_percent_are_never_confused(cold: sr.RateTable) -> None:
-    relative = _quietly(cold, measure="relative_difference").sentences(cautions=False)
+    relative = compare_quietly(cold, measure="relative_difference").sentences(cautions=False)
     assert all("a relative difference of" in text for text in relative)
     assert not any("points" in text for text in relative)
-    ratio = _quietly(cold, measure="ratio").sentences(cautions=False)
+    ratio = compare_quietly(cold, measure="ratio").sentences(cautions=False)
     assert all(re.search(r"a ratio of \d+\.\d\d", text) for text in ratio)
-    odds = _quietly(cold, measure="odds_ratio").sentences(cautions=False)
+    odds = compare_quietly(cold, measure="odds_ratio").sentences(cautions=False)
     assert all("an odds ratio of" in text for text in odds)
-    difference = _quietly(cold).sentences(cautions=False)
+    difference = compare_quietly(cold).sentences(cautions=False)
     assert not any(re.search(r"difference of [+-][\d.]+%", text) for text in difference)
 
 
 def test_what_the_simple_formula_would_have_claimed(design: sr.SampleDesign) -> None:
-    damp = _quietly(sr.estimate_rates(design, "damp", by="dwelling_type"), "park home")
+    damp = compare_quietly(sr.estimate_rates(design, "damp", by="dwelling_type"), "park home")
     text = damp.sentences()[0]
     assert "would have claimed a difference (p = 0.0003; verdict: false-alarm)" in text
     assert text.startswith("There is no evidence of a difference")
 
 
 def test_margins_adjustment_and_one_side(cold: sr.RateTable) -> None:
-    near = _quietly(cold, alternative="equivalent", margin=0.1)
+    near = compare_quietly(cold, alternative="equivalent", margin=0.1)
     for row, text in enumerate(near.sentences(cautions=False)):
         assert f"conclusion: {near.conclusion[row]}." in text
         assert "90% limits" in text
-    holm = _quietly(cold, multiplicity="holm").sentences()
+    holm = compare_quietly(cold, multiplicity="holm").sentences()
     assert all("Adjusted by Holm's method" in text for text in holm[:6])
     assert "A family of 6 comparisons, adjusted by Holm's method." in holm
-    greater = _quietly(cold, "owner", alternative="greater").sentences(cautions=False)
+    greater = compare_quietly(cold, "owner", alternative="greater").sentences(cautions=False)
     assert all("95% limits: at least" in text for text in greater)
-    moved = _quietly(cold, "owner", null=0.2).sentences(cautions=False)
+    moved = compare_quietly(cold, "owner", null=0.2).sentences(cautions=False)
     assert all("evidence that it departs from +20.0 points" in text for text in moved)
 
 
 def test_cautions_come_last(cold: sr.RateTable) -> None:
-    said = _quietly(cold).sentences()
+    said = compare_quietly(cold).sentences()
     assert said[-1] == "A difference between groups is not its cause."
     assert "6 comparisons, no adjustment for their number" in said[-2]
     report = pd.DataFrame({"g": ["a", "b"], "p": [0.2, 0.3], "se": [0.01, 0.02]})
-    published = _quietly(sr.rates_from_published(report, rate="p", by="g", se="se"))
+    published = compare_quietly(sr.rates_from_published(report, rate="p", by="g", se="se"))
     assert any("taken as independent" in text for text in published.sentences())
 
 
 def test_levels_numbers_and_everyone(design: sr.SampleDesign) -> None:
-    crossed = _quietly(sr.estimate_rates(design, "damp", by=["terrain", "sex"]))
+    crossed = compare_quietly(sr.estimate_rates(design, "damp", by=["terrain", "sex"]))
     assert crossed.sentences()[0].startswith("Within terrain lowland, ")
-    number = _quietly(sr.estimate_rates(design, "damp", by="sex"), 0.2).sentences()
+    number = compare_quietly(sr.estimate_rates(design, "damp", by="sex"), 0.2).sentences()
     assert "than the 20.0% it is compared with" in number[0]
-    everyone = _quietly(sr.estimate_rates(design, "damp", by="sex"), sr.EVERYONE).sentences()
+    everyone = compare_quietly(sr.estimate_rates(design, "damp", by="sex"), sr.EVERYONE).sentences()
     assert "in everyone" in everyone[0]
     assert '"everyone"' not in everyone[0]
 
@@ -111,7 +108,7 @@ def test_what_cannot_be_compared_is_said(design: sr.SampleDesign) -> None:
     survey = design.frame.to_native()
     survey = survey.assign(heating=survey["heating"].cat.add_categories(["peat"]))
     again = sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
-    gaps = _quietly(sr.estimate_rates(again, "draught", by="heating"), "gas boiler")
+    gaps = compare_quietly(sr.estimate_rates(again, "draught", by="heating"), "gas boiler")
     text = gaps.sentences()[gaps.find("peat")]
     assert text.startswith('"peat" and "gas boiler" cannot be compared')
     assert "a group is empty" in text
@@ -121,7 +118,7 @@ def test_hostile_labels_are_harmless() -> None:
     rng = np.random.default_rng(3)
     labels = ["\x1b[31mred", "a\nb", "<b>bold</b>", "\u202eabc"]
     data = pd.DataFrame({"g": rng.choice(labels, 400), "y": rng.integers(0, 2, 400)})
-    gaps = _quietly(sr.estimate_rates(sr.SampleDesign(data), "y", by="g"))
+    gaps = compare_quietly(sr.estimate_rates(sr.SampleDesign(data), "y", by="g"))
     for text in gaps.sentences():
         assert "\x1b" not in text
         assert "\n" not in text

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import warnings
 from typing import Any
 
 import numpy as np
@@ -12,12 +11,7 @@ import pytest
 
 import svyrates as sr
 from svyrates.publish import WITHHELD
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
+from tests.quiet import compare_quietly
 
 
 @pytest.fixture(scope="module")
@@ -72,7 +66,7 @@ def test_nothing_can_be_computed_from_it(rates: sr.RateTable) -> None:
 
 @pytest.mark.parametrize("versus", [None, "house", sr.EVERYONE, sr.EVERYONE_ELSE, 0.3])
 def test_comparisons_lose_what_the_rates_lost(rates: sr.RateTable, versus: Any) -> None:
-    gaps = _quietly(rates, versus)
+    gaps = compare_quietly(rates, versus)
     public = sr.withhold_rates(rates)
     shown = sr.withhold_comparisons(gaps, public)
     frame, full = shown.to_frame(), gaps.to_frame()
@@ -137,7 +131,7 @@ def test_standards_and_masks(design: sr.SampleDesign, rates: sr.RateTable) -> No
         sr.withhold_rates(published, disclosure=sr.DisclosureRule(minimum=5))
     other = sr.withhold_rates(sr.estimate_rates(design, "damp", by="sex"))
     with pytest.raises(sr.ComparisonError, match="no published version"):
-        sr.withhold_comparisons(_quietly(rates), other)
+        sr.withhold_comparisons(compare_quietly(rates), other)
 
 
 def test_every_row_says_its_standing(rates: sr.RateTable) -> None:
@@ -149,7 +143,7 @@ def test_every_row_says_its_standing(rates: sr.RateTable) -> None:
 def test_adjusted_and_several_outcomes(design: sr.SampleDesign) -> None:
     both = sr.estimate_rates(design, ["damp", "mould"], by="dwelling_type", joint=True)
     public = sr.withhold_rates(both)
-    gaps = sr.withhold_comparisons(_quietly(both), public)
+    gaps = sr.withhold_comparisons(compare_quietly(both), public)
     assert np.isnan(gaps.estimate).sum() >= 2
     adjusted = sr.adjusted_rates(design, "damp ~ dwelling_type + age_group", by="dwelling_type")
     shown = sr.withhold_rates(adjusted, disclosure=sr.DisclosureRule(minimum=5))

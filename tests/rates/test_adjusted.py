@@ -15,12 +15,7 @@ from scipy import special
 
 import svyrates as sr
 from svyrates.rates.logistic import check_matrix, fit_logistic
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
+from tests.quiet import compare_quietly
 
 
 def _problem(seed: int, n: int = 300, k: int = 4) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -164,7 +159,7 @@ def test_margins_by_hand_and_by_jackknife() -> None:
     np.testing.assert_allclose(jackknife.covariance, total, rtol=1e-6)
     scale = np.sqrt(np.outer(np.diag(total), np.diag(total)))
     np.testing.assert_allclose(linear.covariance / scale, total / scale, atol=0.12)
-    gaps = _quietly(linear), _quietly(jackknife)
+    gaps = compare_quietly(linear), compare_quietly(jackknife)
     np.testing.assert_allclose(gaps[0].se, gaps[1].se, rtol=0.1)
     np.testing.assert_allclose(gaps[0].shift_p, gaps[1].shift_p, atol=0.05)
     change = [sr.compare_adjustment(rates, "p").change_se for rates in (linear, jackknife)]
@@ -192,7 +187,7 @@ def test_influence_under_every_design(arguments: dict[str, Any]) -> None:
     np.testing.assert_allclose(margins.covariance, standard.covariance, rtol=1e-6)
     np.testing.assert_allclose(margins.crude_rate, standard.crude_rate, rtol=1e-12)
     np.testing.assert_allclose(margins.df, standard.df)
-    one, other = _quietly(margins), _quietly(standard)
+    one, other = compare_quietly(margins), compare_quietly(standard)
     for name in ("se", "p", "simple_p", "shift", "shift_p", "simple_coverage", "variance_ratio"):
         np.testing.assert_allclose(getattr(one, name), getattr(other, name), rtol=1e-5)
     sources = [gaps.variance_sources().drop(columns=["group", "versus"]) for gaps in (one, other)]
@@ -251,7 +246,7 @@ def test_what_comparisons_of_margins_cannot_do() -> None:
     rates = sr.adjusted_rates(design, "y ~ g + age", by="g")
     with pytest.raises(sr.ComparisonError, match="needs the totals behind the rates"):
         sr.compare_rates(rates, sr.EVERYONE)
-    assert np.isfinite(_quietly(rates, versus=0.4).p).all()
+    assert np.isfinite(compare_quietly(rates, versus=0.4).p).all()
     assert np.isfinite(sr.trend_test(rates).p).all()
     assert np.isfinite(sr.contrast(rates, {"p": 1, "q": -1}, scale="logit").p).all()
 

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import json
-import warnings
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -13,23 +10,13 @@ import pytest
 from scipy import stats
 
 import svyrates as sr
-
-FIXTURES = Path(__file__).parents[2] / "fixtures" / "published"
-
-
-def _case(name: str) -> Any:
-    return json.loads((FIXTURES / f"{name}.json").read_text(encoding="utf-8"))
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
+from tests.outside import published
+from tests.quiet import compare_quietly
 
 
 def test_census_bureau_margins() -> None:
     """U.S. Census Bureau, ACS 2006 accuracy document, table B12001; counts as shares of 10⁸."""
-    case = _case("census_margins")
+    case = published("census_margins")
     given, said = case["inputs"], case["published"]
     unit = 1e8
     report = pd.DataFrame(
@@ -52,7 +39,7 @@ def test_census_bureau_margins() -> None:
 
 def test_census_bureau_proportion() -> None:
     """ACS General Handbook, chapter 8: numerator and denominator seen, printed margin recalled."""
-    case = _case("census_proportion")
+    case = published("census_proportion")
     given, said = case["inputs"], case["published"]
     p = given["X"] / given["Y"]
     margin = np.sqrt(given["moe_X"] ** 2 - p**2 * given["moe_Y"] ** 2) / given["Y"]
@@ -64,7 +51,7 @@ def test_census_bureau_proportion() -> None:
 
 def test_precision_table_of_a_health_survey() -> None:
     """NCHS, NHIS OMB package 0920-0214 (202411), Attachment 8, Sample Adult table 1 (seen)."""
-    case = _case("precision_table")
+    case = published("precision_table")
     rows = [
         (float(p), n, cv)
         for p, printed in case["published"]["cv_percent"].items()
@@ -90,7 +77,7 @@ def test_overlapping_intervals_can_hide_a_difference() -> None:
         report, rate="p", by="g", percent=True, n="n", design_effect=1.0
     )
     assert rates.low[0] < rates.high[1]
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     # The paper's p pools no variance: 0.12 over the root of the two variances.
     assert round(float(gaps.p[0]), 3) in (0.016, 0.017)
     assert gaps.verdict[0] == "agrees"
@@ -102,7 +89,7 @@ def test_part_against_whole() -> None:
     r = share * part_se / whole_se
     report = pd.DataFrame({"g": ["part", "whole"], "p": [0.42, 0.38], "se": [part_se, whole_se]})
     rates = sr.rates_from_published(report, rate="p", by="g", se="se", correlation=r)
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     expected = np.sqrt(whole_se**2 + (1 - 2 * share) * part_se**2)
     assert gaps.se[0] == pytest.approx(expected, rel=1e-12)
     assert gaps.correlation[0] == pytest.approx(r, rel=1e-12)
@@ -131,7 +118,7 @@ def test_every_comparator_works_on_a_report(report: pd.DataFrame) -> None:
     rates = _read(report, n="n")
     se = report["margin"].to_numpy() / 100 / stats.norm.ppf(0.95)
     np.testing.assert_allclose(rates.se, se, rtol=1e-12)
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     assert gaps.levels == (("share", "2019"), ("share", "2023"))
     z = (0.322 - 0.35) / np.hypot(se[0], se[1])
     assert gaps.p[0] == pytest.approx(2 * stats.norm.sf(abs(z)), rel=1e-10)
@@ -153,7 +140,7 @@ def test_every_comparator_works_on_a_report(report: pd.DataFrame) -> None:
 
 
 def test_without_n_there_is_no_simple_formula(report: pd.DataFrame) -> None:
-    gaps = _quietly(_read(report))
+    gaps = compare_quietly(_read(report))
     assert np.isnan(gaps.simple_p).all()
     assert set(gaps.verdict) == {"undetermined"}
     assert all("no sample size was published" in note for note in gaps.note)
@@ -176,19 +163,19 @@ def test_controlled_and_missing_margins(report: pd.DataFrame) -> None:
     assert rates.low[0] == rates.high[0] == rates.rate[0]
     assert "controlled to a known total" in rates.notes[0]
     assert np.isnan([rates.low[3], rates.se[3]]).all()
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     assert gaps.se[0] == pytest.approx(rates.se[1])
     assert np.isnan(gaps.p[1])
     assert "no standard error was published for a rate" in gaps.note[1]
     report.loc[1, "margin"] = 0.0
-    both = _quietly(_read(report))
+    both = compare_quietly(_read(report))
     assert np.isnan(both.p[0])
     assert "the standard error is zero" in both.note[0]
 
 
 def test_rates_of_zero_with_a_margin_are_compared(report: pd.DataFrame) -> None:
     report.loc[0, "share"] = 0.0
-    gaps = _quietly(_read(report, n="n"))
+    gaps = compare_quietly(_read(report, n="n"))
     assert np.isfinite(gaps.p[0])
     assert gaps.se[0] > 0
     effect = _read(report, margin=None, n="n", design_effect=2.0)
@@ -197,7 +184,7 @@ def test_rates_of_zero_with_a_margin_are_compared(report: pd.DataFrame) -> None:
 
 def test_degrees_of_freedom_of_a_report(report: pd.DataFrame) -> None:
     rates = _read(report.assign(df=[12, 30, 12, 30]), df="df")
-    gaps = _quietly(rates)
+    gaps = compare_quietly(rates)
     np.testing.assert_array_equal(gaps.df, [12, 12])
     z = gaps.statistic[0]
     assert gaps.p[0] == pytest.approx(2 * stats.t.sf(abs(z), 12), rel=1e-10)

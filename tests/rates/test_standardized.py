@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import itertools
 import json
-import warnings
 from importlib.resources import files
 from typing import Any
 
@@ -17,6 +16,7 @@ import svyrates as sr
 from svyrates.rates.standard import NAMED, read_standard
 from tests import reference
 from tests.outside import published
+from tests.quiet import compare_quietly
 from tests.reference import Record, Survey
 from tests.strategies import frame_of, surveys
 
@@ -27,12 +27,6 @@ STANDARD = {"18-34": 30, "35-54": 30, "55-74": 25, "75 and over": 15}
 def design() -> sr.SampleDesign:
     survey = sr.demo_survey(wave="2024")
     return sr.SampleDesign(survey, weight="wt", strata="district", clusters="block")
-
-
-def _quietly(*arguments: Any, **options: Any) -> sr.ComparisonTable:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", sr.SimpleFormulaWarning)
-        return sr.compare_rates(*arguments, **options)
 
 
 def _by_hand(data: pd.DataFrame, standard: dict[str, float] | None) -> dict[str, float]:
@@ -139,7 +133,7 @@ def test_a_standard_of_the_group_itself_changes_nothing(design: sr.SampleDesign)
 def test_everyone_else_and_wide_comparisons(design: sr.SampleDesign) -> None:
     """A union has its categories added up before it is standardised."""
     rates = sr.standardize_rates(design, "damp", "tenure", "age_group", STANDARD)
-    rest = _quietly(rates, sr.EVERYONE_ELSE)
+    rest = compare_quietly(rates, sr.EVERYONE_ELSE)
     data = design.frame.to_native()
     joined = data.assign(
         tenure=data["tenure"]
@@ -149,13 +143,13 @@ def test_everyone_else_and_wide_comparisons(design: sr.SampleDesign) -> None:
     merged = sr.SampleDesign(joined, weight="wt", strata="district", clusters="block")
     two = sr.standardize_rates(merged, "damp", "tenure", "age_group", STANDARD)
     row = rest.find("owner")
-    pair = _quietly(two, "other")
+    pair = compare_quietly(two, "other")
     assert rest.versus_rate[row] == pytest.approx(pair.versus_rate[0], rel=1e-12)
     assert rest.se[row] == pytest.approx(pair.se[0], rel=1e-9)
     product = rest.variance_sources()[["weights", "clusters", "covariance", "strata"]].prod(axis=1)
     np.testing.assert_allclose(product, rest.variance_ratio, rtol=1e-9)
     for measure in ("ratio", "odds_ratio", "relative_difference"):
-        assert np.isfinite(_quietly(rates, measure=measure).p).all()
+        assert np.isfinite(compare_quietly(rates, measure=measure).p).all()
     assert np.isfinite(sr.homogeneity_test(rates, method="wald").p[0])
     with pytest.raises(sr.ComparisonError, match="use method='wald'"):
         sr.homogeneity_test(rates)
@@ -163,8 +157,8 @@ def test_everyone_else_and_wide_comparisons(design: sr.SampleDesign) -> None:
 
 def test_the_simple_formula_is_of_crude_rates(design: sr.SampleDesign) -> None:
     rates = sr.standardize_rates(design, "damp", "tenure", "age_group", STANDARD)
-    found = _quietly(rates)
-    crude = _quietly(sr.estimate_rates(design, "damp", by="tenure"))
+    found = compare_quietly(rates)
+    crude = compare_quietly(sr.estimate_rates(design, "damp", by="tenure"))
     np.testing.assert_allclose(found.simple_p, crude.simple_p, rtol=1e-9)
     assert "the weights and the adjustment" in found.explain("owner", "rent-free") or (
         found.shift_p[found.find("owner", "rent-free")] >= 0.05
@@ -327,8 +321,8 @@ def test_crude_beside_adjusted(design: sr.SampleDesign) -> None:
     rates = sr.standardize_rates(design, "damp", "tenure", "age_group", STANDARD)
     both = sr.compare_adjustment(rates, "owner")
     adjusted, crude = (
-        _quietly(rates, "owner"),
-        _quietly(sr.estimate_rates(design, "damp", by="tenure"), "owner"),
+        compare_quietly(rates, "owner"),
+        compare_quietly(sr.estimate_rates(design, "damp", by="tenure"), "owner"),
     )
     np.testing.assert_allclose(both.adjusted, adjusted.estimate, rtol=1e-12)
     np.testing.assert_allclose(both.adjusted_se, adjusted.se, rtol=1e-9)
