@@ -234,7 +234,10 @@ def run(
         Path | None, typer.Option(help="Folder for the results, instead of the plan's own.")
     ] = None,
 ) -> None:
-    """Carry out a plan: tables, figures and a report; 3 if some questions have no answer."""
+    """Carry out a plan: tables, figures and a report.
+
+    A question that fails does not stop the others; the exit status is then 3.
+    """
     from svyrates.command.plan_run import run_plan
 
     code = run_plan(plan, out)
@@ -244,7 +247,10 @@ def run(
 
 @app.command()
 def check(plan: Annotated[Path, typer.Argument(help="A plan: a TOML file.")]) -> None:
-    """Check a plan, its design and its data, without estimating anything."""
+    """Check a plan, its design and its data.
+
+    Nothing is estimated and nothing is written.
+    """
     from svyrates.command.plan_run import check_plan
 
     check_plan(plan)
@@ -258,7 +264,11 @@ def first_plan(
     separator: Annotated[str | None, typer.Option(help="Separator of a CSV file.")] = None,
     encoding: Annotated[str, typer.Option(help="Encoding of text in the file.")] = "utf-8",
 ) -> None:
-    """Look at a data file and write a first plan, with every guess marked."""
+    """Write a first plan for a data file.
+
+    Weight, strata, clusters, replicates, outcomes and groups are guessed from names and values, and
+    every guess is marked as one.
+    """
     from svyrates.command.plan_guess import guess_plan
 
     guess_plan(file, out, replace=replace, separator=separator, encoding=encoding)

@@ -25,6 +25,7 @@ _ROLES = {
         "weight": "w|wt|wgt|weight|pond|pweight|finalwt|expansion",
         "strata": "strat|vstrat|sdmvstra|estrato",
         "clusters": "psu|cluster|upm|segment|block|vpsu|sdmvpsu",
+        "area": "district|region|county|province|department|area|zone",
     }.items()
 }
 _MARK = "# guessed: check"
@@ -51,8 +52,8 @@ def _plan_text(data: pd.DataFrame, file: Path, out: Path) -> str:
     used = {name for names in families.values() for name in names}
     rest = [str(name) for name in data.columns if str(name) not in used]
     weight = _role(rest, "weight", [name for name in rest if _is_weight(data[name])])
-    strata = _role(rest, "strata", rest)
     clusters = _role(rest, "clusters", rest)
+    strata = _role(rest, "strata", rest) or (_area(data, rest) if clusters else None)
     special = {weight, strata, clusters}
     few = [name for name in rest if name not in special and 2 <= data[name].nunique() <= _FEW]
     outcomes = [name for name in few if set(data[name].dropna().unique()) <= {0, 1}]
@@ -72,6 +73,7 @@ def _plan_text(data: pd.DataFrame, file: Path, out: Path) -> str:
         _line("weight", weight),
         _line("strata", strata),
         _line("clusters", clusters),
+        *_reused_codes(data, strata, clusters),
         "",
     ]
     lines += _replicate_lines(families)
@@ -159,6 +161,24 @@ def _is_weight(values: pd.Series) -> bool:
 def _role(names: list[str], role: str, fit: list[str]) -> str | None:
     matching = [name for name in names if _ROLES[role].search(name) and name in fit]
     return matching[0] if matching else None
+
+
+def _area(data: pd.DataFrame, names: list[str]) -> str | None:
+    """The finest column that is named like an area: samples are often stratified by areas."""
+    levels = data[[name for name in names if _ROLES["area"].search(name)]].nunique()
+    return str(levels.idxmax()) if (levels > 1).any() else None
+
+
+def _reused_codes(data: pd.DataFrame, strata: str | None, clusters: str | None) -> list[str]:
+    """Say where codes of sampling units start again: as one unit they would be far too few."""
+    if strata is None or clusters is None:
+        return []
+    codes = len(data[[clusters]].dropna().drop_duplicates())
+    units = len(data[[strata, clusters]].dropna().drop_duplicates())
+    if units == codes:
+        return []
+    counted = f"{codes:,} codes in {_toml(clusters)} are {units:,} units within {_toml(strata)}"
+    return [f"# {counted}: codes that start again, or no strata?"]
 
 
 def _line(key: str, name: str | None) -> str:

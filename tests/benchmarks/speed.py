@@ -102,9 +102,9 @@ def replicated(
     return pd.concat([data, pd.DataFrame(matrix, columns=names, copy=False)], axis=1)
 
 
-def weight_matrix(data: pd.DataFrame) -> NDArray[np.floating]:
+def weight_matrix(data: pd.DataFrame) -> NDArray[Any]:
     """The replicate weights where they lie in the frame, shape (records, replicates)."""
-    matrix: NDArray[np.floating] = data.filter(like="rw_").to_numpy()
+    matrix: NDArray[Any] = data.filter(like="rw_").to_numpy()
     if not np.shares_memory(matrix, data["rw_1"].to_numpy()):
         raise RuntimeError("the matrix is a copy, so its layout may not be that of the frame")
     return matrix
