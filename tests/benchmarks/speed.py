@@ -151,7 +151,7 @@ def _rates_over_sum(by_rows: bool, precision: type) -> None:
     design, matrix = replicate_design(data), weight_matrix(data)
     what = f"{np.dtype(precision).name} by {'rows' if by_rows else 'columns'}"
     _report(
-        f"rates under 80 replicates, {what}, over one sum(axis=0) of them",
+        f"rates, 80 replicates, {what}, over sum(axis=0) of them",
         ratio(lambda: replicate_rates(design), lambda: matrix.sum(axis=0)),
     )
     _report(
@@ -171,7 +171,7 @@ def _estimator_over_rates(n: int, by_rows: bool) -> None:
         ratio(lambda: replicate_estimator(arrays), lambda: replicate_rates(design), rounds=3),
     )
     _report(
-        "- from the frame: taking out its arrays, over building and checking the design",
+        "- both from the frame: taking arrays out, over building the design",
         ratio(
             lambda: replicate_estimator(replicate_arrays(data)),
             lambda: replicate_rates(replicate_design(data)),
