@@ -184,7 +184,7 @@ def test_scans_equal_products(
     both: tuple[sr.SampleDesign, sr.SampleDesign], monkeypatch: pytest.MonkeyPatch
 ) -> None:
     one = sr.estimate_rates(both[1], "damp", by="tenure", where="mould")
-    monkeypatch.setattr(tally, "_DENSE_ATOMS", 0)
+    monkeypatch.setattr(tally, "_PRODUCT_ATOMS", 0)
     other = sr.estimate_rates(both[1], "damp", by="tenure", where="mould")
     np.testing.assert_allclose(one.covariance, other.covariance, rtol=1e-10)
 
