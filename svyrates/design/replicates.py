@@ -171,6 +171,8 @@ def read_replicates(
         values = fault_or(faults, numbers, frame, name, "replicates")
         if values is None:
             continue
+        # A column of a block by rows is spread over all of it: gathered once, then read twice.
+        values = np.ascontiguousarray(values)
         sums[position] = np.dot(values, weights) if asked.factors else values.sum()
         if not np.isfinite(sums[position]):
             rows = np.flatnonzero(~np.isfinite(values))
