@@ -67,27 +67,16 @@ def tally_replicates(
     progress : told how many more cells of the weight matrix are done
     """
     code, n_atoms, (of_pattern, level) = number_atoms(pattern, n_patterns, levels)
-    atom = code.astype(np.int64)
+    atom = code.astype(np.int32)
     counted = (pattern >= 0) & (weights > 0.0)
-    everyone = bool(counted.all())
-    if not everyone:
+    if not counted.all():
         # Records that answer nothing here fall into one atom more, which is cut off afterwards.
         atom[~counted] = n_atoms
     present = np.bincount(atom, minlength=n_atoms + 1)[:n_atoms]
     found = np.flatnonzero(present)
-    place = np.full(n_atoms + 1, found.size, dtype=np.int64)
-    place[found] = np.arange(found.size)
+    place = np.full(n_atoms + 1, found.size, dtype=np.int32)
+    place[found] = np.arange(found.size, dtype=np.int32)
     atom = place[atom]
-    ones = np.ones(weights.size)
-    if factors:
-        sums = _Sums(atom, found.size, for_w=weights, for_n=ones, scale=scale)
-    else:
-        inverse = np.divide(1.0, weights, out=np.zeros_like(ones), where=counted)
-        sums = _Sums(atom, found.size, for_w=ones, for_n=inverse, scale=scale)
-    n, w = np.empty((len(names), found.size)), np.empty((len(names), found.size))
-    for start in range(0, len(names), together):
-        chosen = slice(start, start + together)
-        n[chosen], w[chosen] = sums.of([read(name) for name in names[chosen]], progress)
     full = Tally(
         leaf=np.zeros(found.size, dtype=np.intp),
         atom=np.arange(found.size),
@@ -99,6 +88,16 @@ def tally_replicates(
         pattern=of_pattern[found],
         level=level[found],
     )
+    ones = np.broadcast_to(1.0, weights.shape)
+    if factors:
+        sums = _Sums(atom, found.size, for_w=weights, for_n=ones, scale=scale)
+    else:
+        inverse = np.divide(1.0, weights, out=np.zeros(weights.size), where=counted)
+        sums = _Sums(atom, found.size, for_w=ones, for_n=inverse, scale=scale)
+    n, w = np.empty((len(names), found.size)), np.empty((len(names), found.size))
+    for start in range(0, len(names), together):
+        chosen = slice(start, start + together)
+        n[chosen], w[chosen] = sums.of([read(name) for name in names[chosen]], progress)
     return ReplicateTally(full, n, w)
 
 
@@ -106,7 +105,7 @@ def tally_replicates(
 class _Sums:
     """Sums of some columns by atom: each value times `for_w` makes `w_r`, times `for_n` `w_r/w`."""
 
-    atom: NDArray[np.int64]
+    atom: CodeArray
     n_atoms: int
     for_w: FloatArray
     for_n: FloatArray
@@ -137,7 +136,7 @@ class _Sums:
             rows = slice(start, min(start + _CHUNK_RECORDS, self.atom.size))
             size = rows.stop - start
             factor = np.stack((self.for_w[rows], self.for_n[rows]), axis=1).reshape(-1)
-            place = np.stack((self.atom[rows], self.atom[rows] + half), axis=1, dtype=np.int32)
+            place = np.stack((self.atom[rows], self.atom[rows] + half), axis=1)
             ends = np.arange(0, 2 * size + 1, 2, dtype=np.int32)
             indicator = sparse.csc_array((factor, place.reshape(-1), ends), shape=(2 * half, size))
             if matrix is not None:
@@ -155,10 +154,11 @@ class _Sums:
         """One scan of the records for every column and sum."""
         n: list[FloatArray] = []
         w: list[FloatArray] = []
+        atom = self.atom.astype(np.intp)
         for column in columns:
             for factor, sums in ((self.for_w, w), (self.for_n, n)):
                 values = np.bincount(
-                    self.atom, np.asarray(column, dtype=np.float64) * factor, self.n_atoms + 1
+                    atom, np.asarray(column, dtype=np.float64) * factor, self.n_atoms + 1
                 )
                 sums.append(np.asarray(values[: self.n_atoms], dtype=np.float64))
             progress(self.atom.size)
