@@ -19,7 +19,7 @@ from svyrates.rates.model_source import ModelRates
 from svyrates.rates.source import freedom_of
 from svyrates.rates.standardized import StandardizedRates
 from svyrates.rates.table import RateTable
-from svyrates.words import Column, Table, Tabular, fixed, p_value, points
+from svyrates.words import Column, Table, Tabular, fixed, p_value, points, rule_or_number
 
 __all__ = ["AdjustmentTable", "compare_adjustment"]
 
@@ -117,7 +117,7 @@ class AdjustmentTable(Tabular):
         return (
             (
                 f"{100 * self.level:g}% limits, t tests with the covariance of the groups; df: "
-                f"{self.rates.df_rule}."
+                f"{rule_or_number(self.rates.df_rule)}."
             ),
             "change: adjusted minus crude difference, tested by its own covariance.",
             *self.rates.remarks,

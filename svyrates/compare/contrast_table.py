@@ -19,7 +19,17 @@ from svyrates.compare.verdict import MEANINGS, meaning
 from svyrates.rates.layout import footnotes, machine_column
 from svyrates.rates.table import RateTable
 from svyrates.totals import WaldTest
-from svyrates.words import Column, Table, Tabular, fixed, p_phrase, p_value, points, significant
+from svyrates.words import (
+    Column,
+    Table,
+    Tabular,
+    fixed,
+    p_phrase,
+    p_value,
+    points,
+    rule_or_number,
+    significant,
+)
 
 __all__ = ["ContrastTable", "assemble_contrasts"]
 
@@ -160,7 +170,7 @@ class ContrastTable(Tabular):
         lines = [
             (
                 f"{100 * self.level:g}% limits of sums of {scale[self.scale]}; t tests with the "
-                f"covariance of the groups; df: {self.rates.df_rule}."
+                f"covariance of the groups; df: {rule_or_number(self.rates.df_rule)}."
             )
         ]
         if self.joint is not None:

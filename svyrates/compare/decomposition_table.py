@@ -11,7 +11,17 @@ from numpy.typing import NDArray
 
 from svyrates.rates.layout import machine_column
 from svyrates.rates.table import Coverage
-from svyrates.words import Column, Table, Tabular, fixed, join_words, p_value, percent, points
+from svyrates.words import (
+    Column,
+    Table,
+    Tabular,
+    fixed,
+    join_words,
+    p_value,
+    percent,
+    points,
+    rule_or_number,
+)
 
 __all__ = ["DecompositionTable"]
 
@@ -104,7 +114,7 @@ class DecompositionTable(Tabular):
             "composition: the groups differ in "
             + join_words(list(self.adjust_for))
             + "; rates: they differ within its categories (Kitagawa 1955).",
-            f"{100 * self.level:g}% limits, t tests; df: {self.df_rule}.",
+            f"{100 * self.level:g}% limits, t tests; df: {rule_or_number(self.df_rule)}.",
         ]
         if self.coverage.n_group_unknown:
             lines.append(

@@ -12,7 +12,17 @@ from numpy.typing import NDArray
 from svyrates.compare.verdict import MEANINGS, meaning
 from svyrates.rates.layout import footnotes, machine_column
 from svyrates.rates.table import RateTable
-from svyrates.words import Column, Table, Tabular, count, fixed, p_value, percent, significant
+from svyrates.words import (
+    Column,
+    Table,
+    Tabular,
+    count,
+    fixed,
+    p_value,
+    percent,
+    rule_or_number,
+    significant,
+)
 
 __all__ = ["HomogeneityTable"]
 
@@ -135,7 +145,8 @@ class HomogeneityTable(Tabular):
         lines = [
             (
                 f"{_NAMES[self.method]}, tests at {100 * (1 - self.level):g}%; df: "
-                f"{self.rates.df_rule}. Simple: Pearson's chi-square of the raw counts."
+                f"{rule_or_number(self.rates.df_rule)}. Simple: Pearson's chi-square of the raw "
+                "counts."
             )
         ]
         shown = [row for row in self.design_effects if row and not np.isnan(row[0])]

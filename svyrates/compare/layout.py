@@ -11,7 +11,7 @@ from svyrates.compare.conclusions import finding
 from svyrates.compare.measures import MEASURES, Scale
 from svyrates.compare.verdict import MEANINGS, meaning
 from svyrates.rates.layout import footnotes, machine_column
-from svyrates.words import Column, Table, fixed, join_words, p_value, plural, points
+from svyrates.words import Column, Table, fixed, join_words, p_value, plural, points, rule_or_number
 from svyrates.words import percent as in_percent
 
 if TYPE_CHECKING:
@@ -122,7 +122,7 @@ def _about(table: ComparisonTable) -> list[str]:
     lines = [
         (
             f"{100 * table.limits_level:g}% limits, {method}; {_tests(table, scale)}; df: "
-            f"{table.rates.df_rule}."
+            f"{rule_or_number(table.rates.df_rule)}."
         )
     ]
     if not np.isnan(table.simple_p).all():

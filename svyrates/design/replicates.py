@@ -148,6 +148,7 @@ class ReplicateSet:
 def read_replicates(
     frame: Frame,
     asked: object,
+    weight: str | None,
     weights: FloatArray,
     tree: Hierarchy,
     known_df: int | None,
@@ -161,29 +162,18 @@ def read_replicates(
         return None
     before = len(faults)
     names = _columns(frame, asked.columns, faults)
+    if weight in names:
+        faults.append(
+            f"replicates take in the weight {weight!r} itself as one of {len(names)}; leave it out "
+            "(a pattern such as 'rw_[1-9]*' begins at 1)."
+        )
     check_options(asked, len(names), faults)
     if len(faults) > before:
         return None
-    scale = 10.0**-asked.decimals
-    sums = np.zeros(len(names))
-    n_negative = 0
-    for position, name in enumerate(names):
-        values = fault_or(faults, numbers, frame, name, "replicates")
-        if values is None:
-            continue
-        # A column of a block by rows is spread over all of it: gathered once, then read twice.
-        values = np.ascontiguousarray(values)
-        sums[position] = np.dot(values, weights) if asked.factors else values.sum()
-        if not np.isfinite(sums[position]):
-            rows = np.flatnonzero(~np.isfinite(values))
-            faults.append(
-                f"replicates {name!r} is missing or infinite in {rows.size} of {values.size} rows "
-                f"(first: row {rows[0]}; rows count from 0). Every replicate needs every record."
-            )
-        if values.min() < 0:
-            n_negative += int(np.count_nonzero(values < 0))
+    sums, n_negative = _sums(frame, names, weights if asked.factors else None, faults)
     if len(faults) > before:
         return None
+    scale = 10.0**-asked.decimals
     check_sums(sums * scale, weights, asked.factors)
     strata = tree.n_strata if known_df is not None else None
     planned = plan(asked, len(names), strata, known_df)
@@ -203,6 +193,30 @@ def read_replicates(
         units=planned.units,
         n_negative=n_negative,
     )
+
+
+def _sums(
+    frame: Frame, names: Sequence[str], weights: FloatArray | None, faults: list[str]
+) -> tuple[FloatArray, int]:
+    """Sum of every replicate, times the weight for factors, and how many cells are negative."""
+    sums = np.zeros(len(names))
+    n_negative = 0
+    for position, name in enumerate(names):
+        values = fault_or(faults, numbers, frame, name, "replicates")
+        if values is None:
+            continue
+        # A column of a block by rows is spread over all of it: gathered once, then read twice.
+        values = np.ascontiguousarray(values)
+        sums[position] = values.sum() if weights is None else np.dot(values, weights)
+        if not np.isfinite(sums[position]):
+            rows = np.flatnonzero(~np.isfinite(values))
+            faults.append(
+                f"replicates {name!r} is missing or infinite in {rows.size} of {values.size} rows "
+                f"(first: row {rows[0]}; rows count from 0). Every replicate needs every record."
+            )
+        if values.min() < 0:
+            n_negative += int(np.count_nonzero(values < 0))
+    return sums, n_negative
 
 
 def _columns(frame: Frame, asked: str | Sequence[str], faults: list[str]) -> tuple[str, ...]:

@@ -114,7 +114,7 @@ class SampleDesign:
         if replicates is not None:
             known = self.df if strata is not None or clusters is not None else None
             self._replicates = read_replicates(
-                frame, replicates, self._weights, self._tree, known, faults
+                frame, replicates, weight, self._weights, self._tree, known, faults
             )
         all_faults(DesignError, "The design has", faults)
 

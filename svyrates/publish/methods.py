@@ -11,7 +11,7 @@ from svyrates.compare.measures import MEASURES
 from svyrates.compare.table import ComparisonTable
 from svyrates.rates.layout import INTERVAL_NAMES
 from svyrates.rates.table import RateTable
-from svyrates.words import Tabular, join_words
+from svyrates.words import Tabular, join_words, rule_or_number
 
 __all__ = ["methods_of"]
 
@@ -60,7 +60,10 @@ def _of_rates(rates: RateTable) -> Iterable[tuple[str, list[str]]]:
     yield f"Rates are weighted; their variances are {variance}.", []
     level, method = f"{100 * rates.level:g}%", INTERVAL_NAMES[rates.interval]
     keys = ["korn-graubard" if rates.interval == "korn-graubard" else "dean-pagano"]
-    yield f"{level} limits of rates: {method}; degrees of freedom: {rates.df_rule}.", keys
+    yield (
+        f"{level} limits of rates: {method}; degrees of freedom: {rule_or_number(rates.df_rule)}.",
+        keys,
+    )
     if rates.kind.startswith("standardised"):
         yield f"Rates are directly {rates.kind}.", ["klein"]
     if rates.kind.startswith("adjusted"):

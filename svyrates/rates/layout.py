@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import pandas as pd
 
-from svyrates.words import Column, Table, count, fixed, plural, significant
+from svyrates.words import Column, Table, count, fixed, plural, rule_or_number, significant
 from svyrates.words import percent as in_percent
 
 if TYPE_CHECKING:
@@ -109,7 +109,10 @@ def _about(rates: RateTable) -> list[str]:
     """The lines under the table that say what it speaks of."""
     level = f"{100 * rates.level:g}"
     lines = [
-        f"{level}% limits: {INTERVAL_NAMES[rates.interval]}, degrees of freedom: {rates.df_rule}."
+        (
+            f"{level}% limits: {INTERVAL_NAMES[rates.interval]}, degrees of freedom: "
+            f"{rule_or_number(rates.df_rule)}."
+        )
     ]
     lines += rates.remarks
     covered = rates.coverage

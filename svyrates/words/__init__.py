@@ -2,7 +2,16 @@
 
 from svyrates.words.escape import display_width, for_html, for_terminal, shorten
 from svyrates.words.markup import TABLE_STYLE
-from svyrates.words.numbers import count, fixed, p_phrase, p_value, percent, points, significant
+from svyrates.words.numbers import (
+    count,
+    fixed,
+    p_phrase,
+    p_value,
+    percent,
+    points,
+    rule_or_number,
+    significant,
+)
 from svyrates.words.progress import progress_bar
 from svyrates.words.sentences import join_words, plural
 from svyrates.words.table import Column, Table
@@ -25,6 +34,7 @@ __all__ = [
     "plural",
     "points",
     "progress_bar",
+    "rule_or_number",
     "shorten",
     "significant",
 ]

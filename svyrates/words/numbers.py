@@ -20,6 +20,7 @@ __all__ = [
     "p_value",
     "percent",
     "points",
+    "rule_or_number",
     "significant",
 ]
 
@@ -69,6 +70,11 @@ def significant(value: Any, digits: int) -> str:
     places = max(digits - 1 - math.floor(math.log10(abs(value))), 0)
     text = f"{_rounded(value, places):f}"
     return text.rstrip("0").rstrip(".") if "." in text else text
+
+
+def rule_or_number(value: str | float) -> str:
+    """A rule by its name, or the number that was given instead: ``'domain'``, ``'12.5'``."""
+    return value if isinstance(value, str) else significant(value, 4)
 
 
 def count(value: Any) -> str:

@@ -110,6 +110,8 @@ BAD: list[tuple[tuple[Any, ...], dict[str, Any], str]] = [
     (("rx_*", "bootstrap"), {}, "pattern 'rx_\\*' fits 0 columns"),
     ((["rw_1", "rw_1"], "bootstrap"), {}, "name a column twice"),
     ((["rw_1", "rw_99"], "bootstrap"), {}, "no column 'rw_99'. Did you mean"),
+    ((["rw_1", "w"], "bootstrap"), {}, "take in the weight 'w' itself as one of 2"),
+    (("*w*", "bootstrap"), {}, "take in the weight 'w' itself as one of 9"),
     (("rw_*", "jackknife"), {}, "scheme must be one of"),
     (("rw_*", "fay"), {}, "scheme='fay' needs `fay`"),
     (("rw_*", "fay"), {"fay": 1.0}, "fay must be at least 0 and below 1"),

@@ -11,7 +11,7 @@ import pytest
 from hypothesis import example, given
 from hypothesis import strategies as st
 
-from svyrates.words import count, fixed, p_value, percent, points, significant
+from svyrates.words import count, fixed, p_value, percent, points, rule_or_number, significant
 
 FINITE = st.floats(allow_nan=False, allow_infinity=False)
 
@@ -127,3 +127,11 @@ def test_numbers_of_numpy_read_like_those_of_python() -> None:
     assert fixed(np.float64(2.675), 2) == "2.68"
     assert count(np.int64(-1234567)) == "-1,234,567"
     assert percent(np.float64(0.5), 0) == "50%"
+
+
+@pytest.mark.parametrize(
+    ("given_rule", "text"),
+    [("domain", "domain"), (math.inf, "∞"), (12.0, "12"), (12.345678, "12.35"), (1500.0, "1500")],
+)
+def test_rules_keep_their_names_and_numbers_are_read(given_rule: str | float, text: str) -> None:
+    assert rule_or_number(given_rule) == text
