@@ -20,7 +20,8 @@ from svyrates.rates.crude import CrudeRates
 from svyrates.rates.estimate import check_options, check_rule, usual_rule
 from svyrates.rates.formula import ParsedFormula, parse_formula
 from svyrates.rates.limits import Interval
-from svyrates.rates.logistic import LogisticFit, check_matrix, fit_logistic, refit
+from svyrates.rates.logistic import LogisticFit, fit_logistic, refit
+from svyrates.rates.logistic_faults import Basis, model_basis
 from svyrates.rates.model_matrix import ModelMatrix, build_matrix, read_model_columns
 from svyrates.rates.model_source import ModelRates
 from svyrates.rates.model_table import ModelTable, model_table
@@ -143,32 +144,32 @@ class _Model:
 
     def source(self, rule: str | float, level: float) -> tuple[ModelRates, ModelTable]:
         """Fit the model, and find the margins and the spread of everything."""
-        x, y = self.built.matrix, self.y.astype(np.float64)
-        w = self.design.weights[self.kept]
-        check_matrix(x, y, w, self.built.names)
-        fit = fit_logistic(x, y, w, self.built.names)
-        matrices = [self._with(label[0]) for label in self.labels]
-        margins = _margins(fit.beta, matrices, w)
+        y, w = self.y.astype(np.float64), self.design.weights[self.kept]
+        basis = model_basis(self.built.matrix, y, w, self.built.names)
+        fit = fit_logistic(basis, y, w)
+        beta = basis.coefficients(fit.gamma)
+        matrices = [self._with(label[0], basis) for label in self.labels]
+        margins = _margins(fit.gamma, matrices, w)
         sides = self.crude.rows_of(list(range(len(self.labels))))
         found = self.crude.sides(sides)
-        values = np.concatenate((margins, found.unweighted, found.rate, fit.beta))
+        values = np.concatenate((margins, found.unweighted, found.rate, beta))
         if self.design.replicates is None:
-            influence = self._influence(fit, matrices, margins, found.unweighted, found.rate)
+            influence = self._influence(basis, fit, matrices, margins, found.unweighted, found.rate)
             spreads: dict[str, Spread] = {
                 "design": influence.spread,
                 "unstratified": influence.unstratified,
                 "independent-records": influence.independent_records,
             }
         else:
-            spreads = {"design": self._replicated(fit, matrices, values, sides)}
+            spreads = {"design": self._replicated(basis, fit, matrices, values, sides)}
         estimates = Estimates(values, spreads["design"])
-        g, k = len(self.labels), fit.beta.size
+        g, k = len(self.labels), beta.size
         everyone = self.crude.sides(self.crude.row(dict.fromkeys(range(g), 1.0)))
         table = model_table(
             self.parsed.text,
             self.built.names,
             self.built.terms,
-            fit.beta,
+            beta,
             estimates.covariance()[3 * g : 3 * g + k, 3 * g : 3 * g + k],
             float(freedom_of(everyone, self.crude, rule)[0]),
             self.kept.size,
@@ -176,15 +177,16 @@ class _Model:
         )
         return ModelRates(self.crude, values[: 3 * g], spreads, g), table
 
-    def _with(self, label: object) -> FloatArray | None:
+    def _with(self, label: object, basis: Basis) -> FloatArray | None:
         """The matrix with everyone in one group; None for a group without a record."""
         key = f"x{self.parsed.columns.index(self.by)}"
         if str(label) not in self.built.categories(key):
             return None
-        return self.built.with_level(key, label)
+        return basis.of(self.built.with_level(key, label))
 
     def _influence(
         self,
+        basis: Basis,
         fit: LogisticFit,
         matrices: list[FloatArray | None],
         margins: FloatArray,
@@ -192,13 +194,13 @@ class _Model:
         rate: FloatArray,
     ) -> InfluenceTotals:
         """Influence of every record on margins, crude rates and coefficients."""
-        x, y = self.built.matrix, self.y.astype(np.float64)
+        x, y = basis.matrix, self.y.astype(np.float64)
         w = self.design.weights[self.kept]
         total = w.sum()
-        mu = np.stack([_predicted(matrix, fit.beta, w.size) for matrix in matrices], axis=1)
+        mu = np.stack([_predicted(matrix, fit.gamma, w.size) for matrix in matrices], axis=1)
         through = np.stack(
             [
-                np.zeros(fit.beta.size)
+                np.zeros(fit.gamma.size)
                 if matrix is None
                 else (w * mu[:, g] * (1.0 - mu[:, g])) @ matrix / total
                 for g, matrix in enumerate(matrices)
@@ -212,13 +214,13 @@ class _Model:
 
         def values(rows: slice) -> FloatArray:
             score = x[rows] * (fit.weights[rows] * (y[rows] - fit.fitted[rows]))[:, None]
-            of_beta = score @ bread
-            of_margin = w[rows, None] * (mu[rows] - margins) / total + of_beta @ through
+            of_gamma = score @ bread
+            of_margin = w[rows, None] * (mu[rows] - margins) / total + of_gamma @ through
             here = member[rows]
             with np.errstate(invalid="ignore", divide="ignore"):
                 of_plain = here * (y[rows, None] - unweighted) / size
                 of_crude = here * w[rows, None] * (y[rows, None] - rate) / weighted
-            whole = np.hstack((of_margin, of_plain, of_crude, of_beta))
+            whole = np.hstack((of_margin, of_plain, of_crude, basis.coefficients(of_gamma)))
             # An empty group has no rate; it must not spoil the others' sums.
             return np.asarray(np.nan_to_num(whole))
 
@@ -235,7 +237,12 @@ class _Model:
         return np.stack([codes == p for p in position], axis=1).astype(np.float64)
 
     def _replicated(
-        self, fit: LogisticFit, matrices: list[FloatArray | None], values: FloatArray, sides: Any
+        self,
+        basis: Basis,
+        fit: LogisticFit,
+        matrices: list[FloatArray | None],
+        values: FloatArray,
+        sides: Any,
     ) -> ReplicatedSpread:
         """Margins, crude rates and coefficients under every replicate."""
         replicates = self.design.replicates
@@ -253,12 +260,13 @@ class _Model:
         rows = []
         y = self.y.astype(np.float64)
         with progress_bar("Fits", replicates.count, worth=work > _WORTH_PROGRESS) as progress:
-            fits = refit(self.built.matrix, y, weights(), fit.beta, self.built.names, progress)
+            fits = refit(basis, y, weights(), fit.gamma, progress)
             for again, w in zip(fits, weights(), strict=True):
                 if again is None:
-                    rows.append(np.full(len(matrices) + fit.beta.size, np.nan))
+                    rows.append(np.full(len(matrices) + fit.gamma.size, np.nan))
                     continue
-                rows.append(np.concatenate((_margins(again.beta, matrices, w), again.beta)))
+                margins = _margins(again.gamma, matrices, w)
+                rows.append(np.concatenate((margins, basis.coefficients(again.gamma))))
         fitted = np.array(rows)
         whole = np.hstack(
             (fitted[:, : len(matrices)], plain[1], plain[0], fitted[:, len(matrices) :])
@@ -266,16 +274,16 @@ class _Model:
         return ReplicatedSpread(whole, values, replicates)
 
 
-def _predicted(matrix: FloatArray | None, beta: FloatArray, n: int) -> FloatArray:
-    return np.full(n, np.nan) if matrix is None else np.asarray(special.expit(matrix @ beta))
+def _predicted(matrix: FloatArray | None, gamma: FloatArray, n: int) -> FloatArray:
+    return np.full(n, np.nan) if matrix is None else np.asarray(special.expit(matrix @ gamma))
 
 
-def _margins(beta: FloatArray, matrices: list[FloatArray | None], w: FloatArray) -> FloatArray:
+def _margins(gamma: FloatArray, matrices: list[FloatArray | None], w: FloatArray) -> FloatArray:
     """Predictive margin of every group; NaN for one without a record."""
     total = w.sum()
     return np.array(
         [
-            np.nan if matrix is None else float(w @ special.expit(matrix @ beta)) / total
+            np.nan if matrix is None else float(w @ special.expit(matrix @ gamma)) / total
             for matrix in matrices
         ]
     )

@@ -165,5 +165,6 @@ def _of_factor(found: Any, factor: Any, part: Any, parsed: ParsedFormula) -> Ite
 
 
 def _readable(text: str, parsed: ParsedFormula) -> str:
-    """Put the columns' own names back."""
+    """Put the columns' own names back, and leave out what only patsy needs."""
+    text = re.sub(r"(?<=\d)\.0\b", "", re.sub(r"\(\(([^()]*)\)\)", r"(\1)", text))
     return re.sub(r"\bx(\d+)\b", lambda match: parsed.columns[int(match[1])], text)
