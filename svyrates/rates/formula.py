@@ -7,6 +7,7 @@ written anew from what was read: columns become `x0`, `x1`, …, numbers and lab
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -25,6 +26,10 @@ _TOKEN = re.compile(
 _TERMS = {"+": 1, "-": 1, "*": 2, "/": 2, ":": 3, "**": 4}
 _ARITHMETIC = {"+": 1, "-": 1, "*": 2, "/": 2, "**": 4}
 _LONGEST, _DEEPEST = 10_000, 60
+# Terms that a formula may expand to, and signs within a function: `a * b * c …` doubles with each.
+_MOST_TERMS = 200
+# A piece that has been read: rebuilt, and how many terms or operands it expands to.
+Piece = tuple[str, int]
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,7 +114,7 @@ class _Reader:
 
     def whole(self) -> str:
         """All terms of the right side."""
-        built = self.expression(_TERMS, self.term)
+        built, _ = self.expression(_TERMS, self.term)
         if self.peek()[0] != "end":
             self.refuse(f"{self.peek()[1]!r}, which does not fit,")
         return built
@@ -130,43 +135,49 @@ class _Reader:
         self.position += 1
 
     def expression(
-        self, binding: dict[str, int], operand: Callable[[], str], least: int = 0
-    ) -> str:
+        self, binding: dict[str, int], operand: Callable[[], Piece], least: int = 0
+    ) -> Piece:
         """Operands and signs by precedence, every pair in parentheses of its own."""
         self.depth += 1
         if self.depth > _DEEPEST:
             self.refuse("too many levels of parentheses")
-        built = operand()
+        built, size = operand()
         while self.peek()[0] == "sign" and binding.get(self.peek()[1], -1) > least:
             sign = self.next()[1]
             if sign == "**" and binding is _TERMS:
-                other = self.power()
+                other, more = self.power()
+                size = (size + 1) ** more - 1
             else:
-                other = self.expression(binding, operand, binding[sign])
+                # Powers of powers are read from the right.
+                other, more = self.expression(binding, operand, binding[sign] - (sign == "**"))
+                crossed = binding is _TERMS and sign in "*:"
+                size = size * more + (size + more) * (sign != ":") if crossed else size + more
+            if size > _MOST_TERMS:
+                self.refuse(f"more than {_MOST_TERMS} terms")
             built = f"({built} {sign} {other})"
         self.depth -= 1
-        return built
+        return built, size
 
-    def power(self) -> str:
+    def power(self) -> Piece:
         kind, word, _ = self.next()
         if kind != "number" or not word.isdigit() or not 1 <= int(word) <= 6:
             self.refuse("a power of terms that is no whole number from 1 to 6,")
-        return str(int(word))
+        return str(int(word)), int(word)
 
-    def term(self) -> str:
+    def term(self) -> Piece:
         """A column, 0 or 1, a function, or terms in parentheses."""
         kind, word, place = self.next()
         if kind == "sign" and word == "(":
-            built = self.expression(_TERMS, self.term)
+            piece = self.expression(_TERMS, self.term)
             self.expect(")")
-            return built
+            return piece
         if kind == "sign" and word in "+-" and self.peek()[1] in ("0", "1"):
-            return f"{word}{self.next()[1]}"
+            return f"{word}{self.next()[1]}", 1
         if kind == "number" and word in ("0", "1"):
-            return word
+            return word, 1
         if kind == "name" and self.peek()[1] == "(":
-            return self.function(word, place)
-        return self.column(kind, word, place)
+            return self.function(word, place), 1
+        return self.column(kind, word, place), 1
 
     def column(self, kind: str, word: str, place: int) -> str:
         if kind not in ("name", "quoted") or word == "``":
@@ -184,7 +195,7 @@ class _Reader:
                 self.next()
                 built += ", " + (self.contrast() if name == "C" else self.option())
         else:
-            built = self.expression(_ARITHMETIC, self.operand)
+            built, _ = self.expression(_ARITHMETIC, self.operand)
         self.expect(")")
         return f"{name}({built})"
 
@@ -200,7 +211,7 @@ class _Reader:
         if kind not in ("label", "number"):
             self.refuse("a reference level that is neither a label in quotes nor a number,")
         self.expect(")")
-        return f"Treatment({word[1:-1]!r})" if kind == "label" else f"Treatment({float(word)!r})"
+        return f"Treatment({word[1:-1]!r})" if kind == "label" else f"Treatment({self.real(word)})"
 
     def option(self) -> str:
         """`df=4` or `degree=3` of a spline."""
@@ -213,15 +224,22 @@ class _Reader:
             self.refuse(f"{name} that is no whole number up to 50,")
         return f"{name}={int(word)}"
 
-    def operand(self) -> str:
+    def operand(self) -> Piece:
         """A column, a number, or arithmetic in parentheses."""
         kind, word, place = self.next()
         if kind == "sign" and word == "(":
-            built = self.expression(_ARITHMETIC, self.operand)
+            built, size = self.expression(_ARITHMETIC, self.operand)
             self.expect(")")
-            return f"({built})"
+            return f"({built})", size
         if kind == "sign" and word == "-":
-            return f"(-{self.expression(_ARITHMETIC, self.operand, 3)})"
+            built, size = self.expression(_ARITHMETIC, self.operand, 3)
+            return f"(-{built})", size
         if kind == "number":
-            return repr(float(word))
-        return self.column(kind, word, place)
+            return self.real(word), 1
+        return self.column(kind, word, place), 1
+
+    def real(self, word: str) -> str:
+        """A number, written by `repr`; never a whole one, whose powers have no bound."""
+        if not math.isfinite(float(word)):
+            self.refuse(f"the number {word}, which is too large,")
+        return repr(float(word))

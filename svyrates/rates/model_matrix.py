@@ -20,6 +20,7 @@ __all__ = ["ModelColumns", "ModelMatrix", "build_matrix", "read_model_columns"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
+_MOST_COLUMNS = 1_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,25 +111,34 @@ def build_matrix(
     parsed: ParsedFormula, columns: ModelColumns, kept: NDArray[np.intp]
 ) -> ModelMatrix:
     """Model matrix of some records."""
-    from patsy import EvalEnvironment, NAAction, PatsyError, dmatrix
+    from patsy import EvalEnvironment, NAAction, PatsyError, build_design_matrices, incr_dbuilder
 
     data = {f"x{i}": columns.categorical(name, kept) for i, name in enumerate(parsed.columns)}
     # Nothing of the caller's can be seen from here.
     names_at_hand = EvalEnvironment([{"log": np.log, "exp": np.exp, "sqrt": np.sqrt}])
+    undefined_stays = NAAction(on_NA="raise", NA_types=[])
     try:
         with np.errstate(all="ignore"):
-            undefined_stays = NAAction(on_NA="raise", NA_types=[])
-            built = dmatrix(parsed.right, data, names_at_hand, NA_action=undefined_stays)
-    except PatsyError as problem:
-        reason = _readable(str(problem).splitlines()[0], parsed)
+            info = incr_dbuilder(
+                parsed.right, lambda: iter([data]), names_at_hand, NA_action=undefined_stays
+            )
+            # Columns are counted before any is made: labels multiply in interactions.
+            few = len(info.column_names) <= _MOST_COLUMNS
+            built = build_design_matrices([info], data, NA_action=undefined_stays) if few else None
+    except (PatsyError, ValueError, TypeError, ArithmeticError) as problem:
+        reason = _readable(str(problem).partition("\n")[0], parsed)
         raise QuestionError(f"The formula {parsed.text!r} cannot be built: {reason}.") from problem
-    matrix = np.asarray(built, dtype=np.float64)
+    if built is None:
+        raise QuestionError(
+            f"The formula {parsed.text!r} makes {len(info.column_names):,} columns, more than "
+            f"{_MOST_COLUMNS:,}. Is a column with many labels meant as numbers?"
+        )
+    matrix = np.asarray(built[0], dtype=np.float64)
     faults = []
     bad = int(np.count_nonzero(~np.isfinite(matrix).all(axis=1)))
     if bad:
         faults.append(f"terms are infinite or undefined in {bad} records, such as log of 0.")
     all_faults(QuestionError, f"The formula {parsed.text!r} has", faults)
-    info = built.design_info
     names = tuple(_coefficients(info, parsed))
     terms = {
         _readable(name, parsed): where

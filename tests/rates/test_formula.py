@@ -48,6 +48,7 @@ ALLOWED = [
     "y ~ C(g, Treatment(reference='r')) + a",
     "y ~ I(a**2) + I((a + b)*2.5/b - -a)",
     "y ~ I(2*a**2) + I(-b**2) + I(a - b - 1)",
+    "y ~ I(b**2**0.5) + I(2**-b)",
     "y ~ log(b) + exp(a) + sqrt(b + 1)",
     "y ~ center(a) + standardize(b)",
     "y ~ bs(b, df=4) + cr(a, df=3)",
@@ -124,6 +125,55 @@ ATTACKS = [
 def test_everything_else_is_refused_in_words(text: str) -> None:
     with pytest.raises(sr.QuestionError, match="formula"):
         parse_formula(text)
+
+
+GREEDY = {
+    "y ~ " + "*".join(f"a{i}" for i in range(8)): "more than 200 terms",
+    "y ~ " + "*".join(f"a{i}" for i in range(400)): "more than 200 terms",
+    "y ~ (" + "+".join(f"a{i}" for i in range(20)) + ")**3": "more than 200 terms",
+    "y ~ (a + b):(" + "+".join(f"a{i}" for i in range(101)) + ")": "more than 200 terms",
+    "y ~ " + "+".join(f"a{i}" for i in range(201)): "more than 200 terms",
+    "y ~ I(a" + "+a" * 1_500 + ")": "more than 200 terms",
+    "y ~ I(" + "-" * 1_000 + "a)": "too many levels",
+    "y ~ I(a*1e999)": "the number 1e999, which is too large",
+}
+
+
+@pytest.mark.parametrize(("text", "message"), GREEDY.items(), ids=range(len(GREEDY)))
+def test_what_would_never_end_is_refused(text: str, message: str) -> None:
+    with pytest.raises(sr.QuestionError, match=message):
+        parse_formula(text)
+
+
+@pytest.mark.parametrize(
+    "text",
+    ["y ~ bs(b, df=1)", "y ~ I(a + (0-8)**0.5)", "y ~ I(b + 9**9**9)", "y ~ I(b + 1/0)",
+     'y ~ C(g, Treatment("never"))', "y ~ center(g)"],
+)  # fmt: skip
+def test_what_cannot_be_built_is_said(text: str, data: pd.DataFrame) -> None:
+    parsed = parse_formula(text)
+    columns = read_model_columns(open_frame(data), parsed.columns, None, [])
+    with pytest.raises(sr.QuestionError, match=r"cannot be built: .|infinite or undefined"):
+        build_matrix(parsed, columns, np.arange(len(data)))
+
+
+def test_as_many_terms_as_are_allowed_can_be_built(data: pd.DataFrame) -> None:
+    wide = pd.DataFrame({f"a{i}": data["a"] for i in range(200)})
+    parsed = parse_formula("y ~ " + " + ".join(wide))
+    columns = read_model_columns(open_frame(wide), parsed.columns, None, [])
+    assert build_matrix(parsed, columns, np.arange(60)).matrix.shape == (60, 201)
+    sums = parse_formula("y ~ I(" + " + ".join(["a"] * 200) + ")")
+    columns = read_model_columns(open_frame(data), sums.columns, None, [])
+    built = build_matrix(sums, columns, np.arange(60))
+    np.testing.assert_allclose(built.matrix[:, 1], 200 * data["a"])
+
+
+def test_columns_are_counted_before_they_are_made() -> None:
+    labels = pd.DataFrame({"g": np.arange(60).astype(str), "h": np.arange(60).astype(str)})
+    parsed = parse_formula("y ~ g * h")
+    columns = read_model_columns(open_frame(labels), parsed.columns, None, [])
+    with pytest.raises(sr.QuestionError, match="makes 3,600 columns, more than 1,000"):
+        build_matrix(parsed, columns, np.arange(60))
 
 
 def test_not_even_text() -> None:
